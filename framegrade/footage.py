@@ -7,6 +7,7 @@ written in the file is reported but never applied, because the rows must stay in
 from __future__ import annotations
 
 import glob
+import heapq
 import math
 import os
 import re
@@ -195,6 +196,8 @@ class ReadFaults:
         Frames handed out.
     promised_frames : int or None
         Frames the container promised.
+    read_s, promised_s : float
+        End of the last frame handed out, and the duration the container promised; NaN when unknown.
     decode_errors : int
         Packets the decoder refused.
     lost_frames : int
@@ -212,6 +215,8 @@ class ReadFaults:
 
     frames: int = 0
     promised_frames: int | None = None
+    read_s: float = math.nan
+    promised_s: float = math.nan
     decode_errors: int = 0
     lost_frames: int = 0
     damaged_frames: int = 0
@@ -225,8 +230,11 @@ class ReadFaults:
         """The faults as sentences without a file name; empty for a clean clip."""
         found = []
         if self.truncated:
-            of = f" of {self.promised_frames}" if self.promised_frames else ""
-            found.append(f"read {self.frames}{of} frames: the file is truncated")
+            state = "truncated or damaged" if self.lost_frames or self.decode_errors else "truncated"
+            if self.promised_frames:
+                found.append(f"the file is {state}: {self.frames} of {self.promised_frames} frames could be read")
+            else:
+                found.append(f"the file is {state}: {self.read_s:.2f} of {self.promised_s:.2f} s could be read")
         if self.read_errors:
             found.append(f"{_times(self.read_errors, 'read')} from the file failed")
         if self.lost_frames or self.decode_errors:
@@ -429,7 +437,7 @@ def _choose_stream(path: Path, container: av.container.InputContainer) -> av.Vid
         held = "only sound" if container.streams.audio else "no moving picture"
         raise FootageError(path, f"holds no video stream, {held}")
     if not _CONTAINERS & set(container.format.name.split(",")):
-        raise FootageError(path, f"is not a video file (read as {container.format.name})")
+        raise FootageError(path, _not_a_clip(container.format.name))
     decodable = [stream for stream in moving if stream.codec_context is not None]
     if not decodable:
         raise FootageError(path, "its video is coded in a way that the installed decoders do not know")
@@ -441,6 +449,14 @@ def _choose_stream(path: Path, container: av.container.InputContainer) -> av.Vid
             -stream.index,
         ),
     )
+
+
+def _not_a_clip(container_format: str) -> str:
+    if container_format.endswith("_pipe") or container_format.startswith("image2"):
+        return "is a still picture, not a clip"
+    if container_format in ("hls", "dash", "concat"):
+        return "is a play list, not a clip"
+    return "is not a video file"
 
 
 def _first_frame(path: Path, container: av.container.InputContainer, stream: av.VideoStream) -> av.VideoFrame:
@@ -558,7 +574,6 @@ def probe(path: str | os.PathLike[str]) -> ClipInfo:
         index = _sample_index(container, stream)
         frame_count = index.frames if index else stream.frames or None
         duration_s = _stream_duration_s(container, stream)
-        # A raw stream carries no times of its own; FFmpeg then makes them up, and the duration from the bit rate.
         average = stream.average_rate or stream.guessed_rate
         rate = float(average) if average else math.nan
         if math.isnan(duration_s):
@@ -572,7 +587,7 @@ def probe(path: str | os.PathLike[str]) -> ClipInfo:
         variable = None
         if index:
             variable = index.uneven
-        elif stream.average_rate and stream.base_rate:
+        elif frame.pts is not None and stream.average_rate and stream.base_rate:
             # The lowest rate that fits all timestamps against their average: they differ when frames are uneven.
             variable = True if abs(stream.average_rate / stream.base_rate - 1) > 0.001 else None
 
@@ -745,28 +760,28 @@ def _read(
     stop_s: float | None,
 ) -> Iterator[Frame]:
     with container:
-        stream.codec_context.thread_count = threads
-        stream.codec_context.thread_type = "AUTO"
         index = _sample_index(container, stream)
         faults.promised_frames = index.frames if index else stream.frames or None
-        promised_entries = index.entries if index else stream.frames or None
-        promised_s = _stream_duration_s(container, stream)
-        origin = None
-        if start_s is not None and start_s > 0:
-            origin = _seek(path, container, stream, start_s)
+        faults.promised_s = _stream_duration_s(container, stream)
+        promised_packets = index.entries if index else stream.frames or None
+        clock = _Clock(container, stream)
+        if start_s is not None and start_s > 0 and not clock.in_decoding_order:
+            clock.origin = _seek(path, container, stream, start_s)
+        whole = clock.origin is None  # read from the very first packet on
+        stream.codec_context.thread_count = threads
+        stream.codec_context.thread_type = "AUTO"
 
-        clock = _Clock(stream, faults, origin)
-        shape = None
-        sizes: dict[int, tuple[int, bool]] = {}
+        form = None
+        coded: dict[int, tuple[int, bool]] = {}  # timestamp -> (coded size, cut short by the container)
         packets = discarded = decoded = 0
         broken = False  # something since the last key frame did not decode intact
-        ended = True
         for packet in _packets(container, stream, faults):
             if packet.size:
                 packets += 1
                 discarded += packet.is_discard
-                if packet.pts is not None:
-                    sizes[packet.pts] = (packet.size, packet.is_corrupt)
+                clock.note(packet)
+                if packet.pts is not None and not packet.is_discard and not clock.in_decoding_order:
+                    coded[packet.pts] = (packet.size, packet.is_corrupt)
             try:
                 frames = packet.decode()
             except av.FFmpegError:
@@ -775,60 +790,83 @@ def _read(
                 continue
             for frame in frames:
                 decoded += 1
-                size_bytes, corrupt_packet = sizes.pop(frame.pts, (None, False))
-                if len(sizes) > 256:  # packets whose frame never came
-                    sizes.pop(next(iter(sizes)))
-                intact = not (frame.is_corrupt or corrupt_packet)
-                if frame.key_frame and intact:
-                    broken = False
-                broken = broken or not intact
-                time_s = clock.time_s(frame)
+                # Frames come in order of time: an earlier packet still waiting has lost its frame without an error.
+                lost = [pts for pts in coded if frame.pts is not None and pts < frame.pts]
+                for pts in lost:
+                    del coded[pts]
+                size_bytes, cut_short = coded.pop(frame.pts, (None, False))
+                intact = not (frame.is_corrupt or cut_short)
+                broken = not intact or ((broken or bool(lost)) and not frame.key_frame)
+                time_s = clock.time_s(frame, faults)
                 if time_s is None:
                     continue
-                form = (frame.width, frame.height, frame.format.name)
-                shape = shape or form
-                if form != shape:
+                form = form or (frame.width, frame.height, frame.format.name)
+                if form != (frame.width, frame.height, frame.format.name):
                     faults.other_size_frames += 1
                     continue
                 if start_s is not None and time_s < start_s:
                     continue
                 if stop_s is not None and time_s >= stop_s:
-                    ended = False
-                    break
+                    _report(faults, on_fault)
+                    return
+                try:
+                    luma = luma_plane(frame)
+                except ValueError as error:
+                    raise FootageError(path, f"its pixel format {frame.format.name} cannot be read: {error}") from None
                 faults.damaged_frames += broken
                 faults.frames += 1
-                yield Frame(faults.frames - 1, time_s, luma_plane(frame), bool(frame.key_frame), size_bytes, broken)
-            if not ended:
-                break
+                faults.read_s = time_s + clock.interval_s
+                yield Frame(faults.frames - 1, time_s, luma, bool(frame.key_frame), size_bytes, broken)
         if not decoded:
             raise FootageError(path, "holds no frame that can be decoded")
-        if ended:
-            faults.lost_frames = max(0, packets - discarded - decoded)
-            if origin is None:
-                faults.truncated = _is_truncated(packets, promised_entries, clock, promised_s)
+        faults.lost_frames = max(0, packets - discarded - decoded)
+        if whole:
+            missing = max(0, promised_packets - packets) if promised_packets else None
+            faults.truncated = _ends_early(clock, faults.promised_s, missing)
+            if missing and not faults.truncated:  # they are missing from the middle
+                faults.lost_frames += missing
+    _report(faults, on_fault)
+
+
+def _report(faults: ReadFaults, on_fault: Callable[[str], None] | None) -> None:
     if on_fault is not None:
         for sentence in faults.sentences():
             on_fault(sentence)
 
 
-def _is_truncated(packets: int, promised: int | None, clock: _Clock, promised_s: float) -> bool:
-    """Whether the file ended early: by the count of coded frames, or by time where none is promised."""
-    if promised:
-        return packets < promised
-    # The duration may belong to a longer sound track or be rounded: allow for half a second.
-    return clock.last_s is not None and promised_s - clock.last_s > 0.5 + 2 * clock.interval_s
+def _ends_early(clock: _Clock, promised_s: float, missing: int | None) -> bool:
+    """Whether the file ends well before its promised end.
+
+    `missing` is the number of promised frames that the file does not hold, None where no number was promised. The
+    duration alone may be rounded, or that of a longer sound track: it is allowed half a second.
+    """
+    if missing == 0:
+        return False
+    if clock.last_s is None or math.isnan(promised_s):
+        return missing is not None
+    return promised_s - clock.last_s > clock.interval_s * 1.5 + (0.5 if missing is None else 0.0)
 
 
 class _Clock:
-    """Turns presentation timestamps into seconds from the first frame, and keeps them increasing."""
+    """Turns timestamps into seconds from the clip's first frame, and keeps them increasing.
 
-    def __init__(self, stream: av.VideoStream, faults: ReadFaults, origin: int | None) -> None:
+    Attributes
+    ----------
+    origin : int or None
+        Timestamp of the clip's first frame, in ticks; taken from the first frame seen when not set before.
+    in_decoding_order : bool
+        True where the container stores only decoding times (AVI) and the codec reorders frames. The presentation
+        times FFmpeg then makes up are wrong; but the times themselves are right once sorted.
+    """
+
+    def __init__(self, container: av.container.InputContainer, stream: av.VideoStream) -> None:
         rate = stream.average_rate or stream.guessed_rate
-        self._faults = faults
         self._ticks = stream.time_base
         self._step = max(1, round(1 / (rate * stream.time_base))) if rate else 1
-        self._origin = origin
         self._last: int | None = None
+        self._pending: list[int] = []
+        self.origin: int | None = None
+        self.in_decoding_order = container.format.name == "avi" and stream.codec_context.has_b_frames
 
     @property
     def interval_s(self) -> float:
@@ -842,31 +880,46 @@ class _Clock:
 
     def _seconds(self, pts: int) -> float:
         # Integers up to the one division: rounded once, exact for any length of clip.
-        return (pts - self._origin) * self._ticks.numerator / self._ticks.denominator
+        return (pts - self.origin) * self._ticks.numerator / self._ticks.denominator
 
-    def time_s(self, frame: av.VideoFrame) -> float | None:
+    def note(self, packet: av.Packet) -> None:
+        """Take the time of a packet about to be decoded."""
+        if self.in_decoding_order and packet.dts is not None:
+            heapq.heappush(self._pending, packet.dts)
+
+    def time_s(self, frame: av.VideoFrame, faults: ReadFaults) -> float | None:
         """Seconds of a frame; None when its timestamp does not advance and the frame must be dropped."""
         pts = frame.pts
+        if self.in_decoding_order:
+            pts = heapq.heappop(self._pending) if self._pending else None
         if pts is None:
-            self._faults.missing_timestamps += 1
+            faults.missing_timestamps += 1
             pts = 0 if self._last is None else self._last + self._step
         elif self._last is not None and pts <= self._last:
-            self._faults.unordered_timestamps += 1
+            faults.unordered_timestamps += 1
             return None
-        if self._origin is None:
-            self._origin = pts
+        if self.origin is None:
+            self.origin = pts
         self._last = pts
         return self._seconds(pts)
 
 
-def _seek(path: Path, container: av.container.InputContainer, stream: av.VideoStream, start_s: float) -> int:
-    """Go to the key frame before a time; returns the timestamp of the clip's first frame, the origin of time."""
-    first = _first_frame(path, container, stream)
-    origin = first.pts if first.pts is not None else stream.start_time or 0
-    try:
-        container.seek(origin + math.floor(Fraction(start_s) / stream.time_base), stream=stream, backward=True)
-    except av.FFmpegError:
-        container.seek(origin, stream=stream, backward=True)  # no index to go by: read through from the start
+def _seek(path: Path, container: av.container.InputContainer, stream: av.VideoStream, start_s: float) -> int | None:
+    """Go to a key frame before a time; returns the timestamp of the clip's first frame.
+
+    None, with the container still at its start, for a stream without timestamps to seek by.
+    """
+    with _open(path) as other:  # apart, so that the decoder of this reading starts fresh
+        origin = _first_frame(path, other, other.streams[stream.index]).pts
+    if origin is None:
+        return None
+    # Containers look key frames up by decoding time, which runs ahead of presentation: aim a second early.
+    target = origin + math.floor((Fraction(start_s) - 1) / stream.time_base)
+    if target > origin:
+        try:
+            container.seek(target, stream=stream, backward=True)
+        except av.FFmpegError:
+            pass  # no index to go by: read through from the start
     return origin
 
 

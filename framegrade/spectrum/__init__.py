@@ -1,0 +1,1 @@
+"""Band signals -> tones, one-third-octave levels, noise floor, blind intervals."""

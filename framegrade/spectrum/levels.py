@@ -1,0 +1,195 @@
+"""Broadband levels: how much vibration there is at every frequency, over the take and window by window.
+
+Short windows of the band signals are transformed over time, band by band. Every frequency f that a frame rate folds
+onto the same alias then shows as its own wave across the bands, `exp(2 pi i f R v)`: in each alias bin the covariance of
+the bands is a sum of a few such waves and noise, and their powers are variance components.
+
+Sources
+-------
+Davis and others (2014), "The Visual Microphone", section on rolling-shutter cameras: rows as samples.
+Brooks, Humphreys (2006), "A deconvolution approach for the mapping of acoustic sources", J. Sound Vib. 294: powers from
+the beams of an array by non-negative least squares (the start value).
+Zhou, Hu, Zhou, Lange (2019), "MM algorithms for variance components models", J. Comput. Graph. Stat. 28(2), eq. 9: the
+multiplicative update that climbs the likelihood.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from framegrade.rows import RowSignals
+from framegrade.spectrum.response import Clock, difference_gain, observable
+
+WINDOW_S = 1.0
+HOP_S = 0.5
+MM_TURNS = 40
+MIN_BANDS = 4
+
+
+@dataclass(frozen=True)
+class Levels:
+    """Vibration power of one axis over frequency and time.
+
+    Attributes
+    ----------
+    frequency_hz : ndarray, shape (K,)
+        Evenly spaced cell centres.
+    density : ndarray, shape (K,)
+        Power of the motion per hertz over the take, native pixels squared (one-sided).
+    floor : ndarray, shape (K,)
+        Density that the measuring noise alone would show.
+    observable : ndarray of bool, shape (K,)
+        False inside blind intervals.
+    window_s : ndarray, shape (windows,)
+        Mid-times of the windows.
+    local : ndarray, shape (windows, K)
+        Density window by window (posterior mean given the take's density).
+    """
+
+    frequency_hz: np.ndarray
+    density: np.ndarray
+    floor: np.ndarray
+    observable: np.ndarray
+    window_s: np.ndarray
+    local: np.ndarray
+
+
+def _filled(values: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Keep the bands that exist in nearly every pair, fill their gaps from neighbouring bands; (values, kept)."""
+    have = np.isfinite(values)
+    kept = have.mean(0) > 0.8
+    out = values[:, kept].copy()
+    index = np.arange(out.shape[1])
+    for n in np.flatnonzero(~np.isfinite(out).all(1)):
+        ok = np.isfinite(out[n])
+        out[n] = np.interp(index, index[ok], out[n, ok]) if ok.any() else 0.0
+    return out, kept
+
+
+def _windows(pairs: int, length: int, hop: int) -> np.ndarray:
+    if pairs <= length:
+        return np.array([0])
+    count = 1 + int(np.ceil((pairs - length) / hop))
+    return np.round(np.linspace(0, pairs - length, count)).astype(int)
+
+
+def measure_levels(signals: RowSignals, axis: int, clock: Clock, highest_hz: float) -> Levels | None:
+    """Density of one axis up to `highest_hz`; None where too few bands or pairs exist.
+
+    Parameters
+    ----------
+    signals : RowSignals
+    axis : int
+        0 yaw, 1 pitch, 2 roll.
+    clock : Clock
+        From `exposure_clock`.
+    highest_hz : float
+
+    Notes
+    -----
+    The model of an alias bin at `a` hertz: covariance C = sum_k S_k g_k^2 w_k w_k^H + noise, over all integers k with
+    |a + k fps| up to `highest_hz`, w_k the wave across the bands and g_k the gain of the frame difference.
+    """
+    values, kept = _filled(signals.fast_px[..., axis])
+    if kept.sum() < MIN_BANDS or len(values) < 8:
+        return None
+    rate = clock.frame_rate_hz
+    length = min(len(values), max(8, round(WINDOW_S * rate)))
+    starts = _windows(len(values), length, max(1, round(HOP_S * rate)))
+    taper = np.hanning(length + 2)[1:-1]
+    spectra, alias = _transform(values, clock, starts, length, taper)
+
+    relative = signals.variance_px2[:, kept, axis]
+    with np.errstate(all="ignore"):
+        relative = np.nanmedian(np.where(np.isfinite(relative), relative, np.nan), 0)
+    relative = relative / np.median(relative)
+    relative = np.clip(np.nan_to_num(relative, nan=1.0), 0.2, 5.0)
+
+    orders = np.arange(-int(np.ceil(highest_hz / rate)) - 1, int(np.ceil(highest_hz / rate)) + 1)
+    signed = alias[:, None] + orders[None, :] * rate                      # (bins, orders)
+    inside = (np.abs(signed) <= highest_hz) & (np.abs(signed) > 0.5 * rate / length)
+    waves = np.exp(2j * np.pi * signed[..., None] * clock.delay_s[kept])   # (bins, orders, bands)
+    gain = difference_gain(np.abs(signed), clock)
+    scale = (taper ** 2).sum() * rate                                      # two-sided density -> power of a bin
+    seen = observable(np.abs(signed), clock) & inside
+
+    power, noise, posterior = _variance_components(spectra, waves, inside, relative)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        density = np.where(seen, 2 * power / (gain ** 2 * scale), np.nan)
+        local = np.where(seen, 2 * posterior / (gain ** 2 * scale), np.nan)
+        floor = np.where(seen, 2 * noise[:, None] / ((1 / relative).sum() * gain ** 2 * scale), np.nan)
+    middle = clock.frame_s[np.minimum(starts + length // 2, len(values) - 1)]
+    return _unfold(signed, inside, density, floor, local, middle, rate / length, highest_hz)
+
+
+def _transform(values, clock, starts, length, taper):
+    """Windowed transforms at the alias bins (0, fps); shapes (windows, bins, bands) and (bins,)."""
+    rate = clock.frame_rate_hz
+    alias = np.arange(1, length) * rate / length
+    out = np.empty((len(starts), len(alias), values.shape[1]), complex)
+    for i, start in enumerate(starts):
+        part = slice(start, start + length)
+        t = clock.frame_s[part] - clock.frame_s[start]
+        kernel = np.exp(-2j * np.pi * np.outer(alias, t)) * taper
+        out[i] = kernel @ values[part]
+    return out, alias
+
+
+def _variance_components(spectra, waves, inside, relative):
+    """Powers of the waves and of the noise in every alias bin, by maximum likelihood.
+
+    Returns
+    -------
+    power : ndarray, shape (bins, orders)
+    noise : ndarray, shape (bins,)
+        Noise power of a band of relative variance 1.
+    posterior : ndarray, shape (windows, bins, orders)
+        Expected power of each wave in each window.
+    """
+    root = 1 / np.sqrt(relative)
+    y = np.moveaxis(spectra, 0, 1) * root                  # (bins, windows, bands)
+    a = waves * root * inside[..., None]                   # (bins, orders, bands)
+    count = len(relative)
+    sample = np.einsum("jwb,jwc->jbc", y, y.conj()) / y.shape[1]
+    own = np.einsum("jkb,jkb->jk", a.conj(), a).real
+    beam = np.einsum("jkb,jbc,jkc->jk", a.conj(), sample, a, optimize=True).real
+    total = np.einsum("jbb->j", sample).real / count
+    power = np.where(inside, np.maximum(beam / np.maximum(own, 1e-12) ** 2, 1e-12), 0.0) * 0.5
+    noise = 0.1 * total + 1e-18
+    eye = np.eye(count)
+    for _ in range(MM_TURNS):
+        model = np.einsum("jk,jkb,jkc->jbc", power, a, a.conj(), optimize=True) + noise[:, None, None] * eye
+        inverse = np.linalg.inv(model)
+        left = np.einsum("jkb,jbc->jkc", a.conj(), inverse)              # a^H R^-1
+        fit = np.einsum("jkc,jcd,jkd->jk", left, sample, left.conj(), optimize=True).real
+        expected = np.einsum("jkc,jkc->jk", left, a).real
+        power = power * np.sqrt(np.maximum(fit, 0) / np.maximum(expected, 1e-30))
+        whole = np.einsum("jbc,jcd,jdb->j", inverse, sample, inverse, optimize=True).real
+        noise = noise * np.sqrt(whole / np.einsum("jbb->j", inverse).real)
+    model = np.einsum("jk,jkb,jkc->jbc", power, a, a.conj(), optimize=True) + noise[:, None, None] * eye
+    left = np.einsum("jkb,jbc->jkc", a.conj(), np.linalg.inv(model))
+    mean = power[:, None] * np.einsum("jkc,jwc->jwk", left, y)
+    spare = power - power ** 2 * np.einsum("jkc,jkc->jk", left, a).real
+    posterior = np.abs(mean) ** 2 + spare[:, None]
+    return power, noise, np.moveaxis(posterior, 1, 0)
+
+
+def _unfold(signed, inside, density, floor, local, middle, step, highest_hz) -> Levels:
+    """Lay the bins out along physical frequency; positive and negative aliases of a real signal are averaged."""
+    cells = int(highest_hz / step)
+    frequency = np.arange(1, cells + 1) * step
+    index = np.round(np.abs(signed) / step).astype(int) - 1
+    ok = inside & (index >= 0) & (index < cells) & np.isfinite(density)
+    count = np.zeros(cells)
+    np.add.at(count, index[ok], 1)
+    total, below = np.zeros(cells), np.zeros(cells)
+    np.add.at(total, index[ok], density[ok])
+    np.add.at(below, index[ok], floor[ok])
+    windows = np.zeros((len(local), cells))
+    for i in range(len(local)):
+        np.add.at(windows[i], index[ok], local[i][ok])
+    seen = count > 0
+    with np.errstate(invalid="ignore", divide="ignore"):
+        return Levels(frequency, total / count, below / count, seen, middle, windows / count)

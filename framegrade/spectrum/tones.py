@@ -1,0 +1,408 @@
+"""Narrow-band vibrations: found one by one, fitted together, each with its 95 % interval.
+
+Rows sample the motion in bursts, which puts side lobes at multiples of the frame rate around every tone. So tones are
+not read off a periodogram: the strongest is fitted with its full difference response, all are refitted together, and
+the search goes on in what is left, until nothing stands above the false-alarm limit.
+
+A tone that wanders (a propeller's speed never stands still) is a bundle of neighbouring lines, 1 / duration apart: a
+complex envelope of limited bandwidth. Its amplitude is the root of the bundle's summed power, times sqrt 2.
+
+Sources
+-------
+Scargle (1982), Astrophys. J. 263: exponential distribution of periodogram ordinates of noise, false-alarm probability.
+Rife, Boorstyn (1974), IEEE Trans. Inf. Theory 20(5): Cramer-Rao bounds of frequency and amplitude, here taken from the
+Gauss-Newton Jacobian of the fit and the noise around the tone.
+Pati, Rezaiifar, Krishnaprasad (1993), "Orthogonal matching pursuit": refit all after each.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from scipy.ndimage import median_filter
+
+from framegrade.rows import RowSignals
+from framegrade.spectrum.response import Clock, difference_gain, difference_response, observable
+
+FALSE_ALARM = 0.01
+#: Nothing weaker than this is called a tone, whatever its significance (px per 1920 of width, peak): coding and
+#: resampling leave periodic traces of this size.
+LEAST_TONE_PX1920 = 0.03
+MAX_TONES = 12
+LOWEST_TONE_HZ = 4.0
+#: Systematic part of an amplitude's interval (95 %, relative), from the simulated campaign in tests/bench.
+AMPLITUDE_SYSTEMATIC = 0.04
+#: Encoders of alternating frame quality leave side lobes half a frame rate away, about this strong (relative).
+CODING_TRACE = 0.10
+OVERSAMPLING = 4
+MAX_WANDER = 0.05   # a bundle reaches this far either side of its strongest line (relative): wandering propellers
+#: A hump of summed power must stand this far above the density on both of its sides to be a wandering tone.
+HUMP_RATIO = 10.0
+WANDER_SHARE = 0.05  # residual lines above this share of the tone's amplitude belong to its bundle
+
+
+@dataclass(frozen=True)
+class Line:
+    """One fitted sinusoid: coefficient of exp(2 pi i f t), native pixels, so that x = Re(coefficient exp(...))."""
+
+    frequency_hz: float
+    coefficient: complex
+
+
+@dataclass(frozen=True)
+class Tone:
+    """One narrow-band vibration of one axis.
+
+    Attributes
+    ----------
+    axis : int
+        0 yaw, 1 pitch, 2 roll.
+    frequency_hz, frequency_ci_hz : float
+        Power-weighted mean frequency, and its 95 % half-width.
+    amplitude_px, amplitude_ci_px : float
+        Peak amplitude at the picture centre (roll: mid-edge), native pixels, and its 95 % half-width.
+    wander_hz : float
+        Spread (rms) of the frequency over the record; 0 for a steady tone.
+    lines : tuple of Line
+    """
+
+    axis: int
+    frequency_hz: float
+    frequency_ci_hz: float
+    amplitude_px: float
+    amplitude_ci_px: float
+    wander_hz: float
+    lines: tuple[Line, ...]
+
+
+@dataclass(frozen=True)
+class _Data:
+    """One axis of band signals with weights; invalid samples carry weight 0."""
+
+    values: np.ndarray  # (pairs, bands)
+    weight: np.ndarray  # (pairs, bands), mean 1 over what is valid
+    clock: Clock
+    duration_s: float
+
+
+def axis_data(signals: RowSignals, axis: int, clock: Clock) -> _Data | None:
+    """Values and weights of one axis, or None where fewer than half the samples exist."""
+    values, variance = signals.fast_px[..., axis], signals.variance_px2[..., axis]
+    valid = np.isfinite(values) & np.isfinite(variance)
+    if valid.sum() < 0.1 * valid.size or len(values) < 8:
+        return None
+    typical = np.median(variance[valid])
+    weight = np.where(valid, 1.0 / (np.where(valid, variance, 1.0) + typical), 0.0)
+    scale = 4.0 * max(np.median(np.abs(values[valid])) / 0.6745, 1e-4)
+    # a sample far outside the record's own spread is a mismatch, not a vibration
+    weight = weight * (np.abs(np.nan_to_num(values)) < 3 * scale)
+    if not weight.any():
+        return None
+    weight = weight / weight[weight > 0].mean()
+    span = float(signals.next_time_s[-1] - signals.time_s[0])
+    return _Data(np.where(valid, values, 0.0), weight, clock, span)
+
+
+def detection_ratio(independent: float, alarm: float = FALSE_ALARM, noise_cells: float = 16.0) -> float:
+    """Ordinate over estimated noise that noise alone exceeds with probability `alarm` anywhere in the search.
+
+    Parameters
+    ----------
+    independent : float
+        Independent frequencies searched.
+    alarm : float
+        False-alarm probability of the whole search.
+    noise_cells : float
+        Equivalent number of independent ordinates behind the noise estimate (a median has half the efficiency of a
+        mean); for very many this is Scargle's `ln(independent / alarm)`.
+
+    Notes
+    -----
+    The ratio of two such chi-square averages has an F(2, 2 m) distribution: `m ((N / alarm)^(1/m) - 1)`.
+    """
+    return noise_cells * ((independent / alarm) ** (1 / noise_cells) - 1)
+
+
+def _search_grid(clock: Clock, duration_s: float, highest_hz: float) -> np.ndarray:
+    return np.arange(LOWEST_TONE_HZ, highest_hz, 1.0 / (OVERSAMPLING * duration_s))
+
+
+class _Periodogram:
+    """Matched filter of the exposure clock at every search frequency (the kernel is shared by all residuals)."""
+
+    def __init__(self, clock: Clock, grid_hz: np.ndarray) -> None:
+        w = -2j * np.pi
+        self.frequency_hz = grid_hz
+        self.frames = np.exp(w * np.outer(grid_hz, clock.frame_s - clock.frame_s[0])).astype(np.complex64)
+        self.bands = np.exp(w * np.outer(grid_hz, clock.delay_s)).astype(np.complex64)
+
+    def power(self, values: np.ndarray, weight: np.ndarray) -> np.ndarray:
+        """Explained sum of squares per unit weight, `|sum w y h*|^2 / sum w^2`-like; shape (frequencies,)."""
+        weighted = (values * weight).astype(np.float32)
+        folded = self.frames @ weighted.astype(np.complex64)
+        return np.abs((folded * self.bands).sum(1)) ** 2 / max(float((weight ** 2).sum()), 1e-12)
+
+
+def _side_noise(power: np.ndarray, frequency_hz: np.ndarray, near_hz: np.ndarray | float, width_hz: float) -> np.ndarray:
+    """Noise ordinate beside every frequency: the higher of two running medians, left and right, over ln 2.
+
+    Ordinates of noise are exponential (Scargle 1982), so their mean is the median over ln 2. Taking the higher side keeps
+    the edge of a broad band of vibration from passing for a tone.
+
+    Parameters
+    ----------
+    near_hz : float or ndarray
+        How far from the frequency the sides begin.
+    width_hz : float
+        Width of each side.
+    """
+    step = frequency_hz[1] - frequency_hz[0]
+    size = max(9, int(width_hz / step) | 1)
+    thin = max(1, size // 64)
+    spots = frequency_hz[::thin]
+    running = median_filter(power[::thin], size // thin | 1, mode="nearest") / np.log(2)
+    offset = near_hz + width_hz / 2
+    low, high = spots[0], spots[-1]
+    left = np.interp(np.clip(frequency_hz - offset, low, high), spots, running)
+    right = np.interp(np.clip(frequency_hz + offset, low, high), spots, running)
+    return np.maximum(left, right)
+
+
+def _line_noise(power: np.ndarray, frequency_hz: np.ndarray) -> np.ndarray:
+    return _side_noise(power, frequency_hz, 0.5, 8.0)
+
+
+def _hump_ratio(power: np.ndarray, frequency_hz: np.ndarray) -> np.ndarray:
+    """Mean power over the width a wandering tone may take, over the density on both sides of it."""
+    step = frequency_hz[1] - frequency_hz[0]
+    total = np.concatenate([[0.0], np.cumsum(power)])
+    half = np.maximum(1, (0.02 * frequency_hz / step).astype(int))
+    index = np.arange(len(power))
+    low, high = np.maximum(index - half, 0), np.minimum(index + half + 1, len(power))
+    mean = (total[high] - total[low]) / (high - low)
+    return mean / np.maximum(_side_noise(power, frequency_hz, MAX_WANDER * frequency_hz, 20.0), 1e-30)
+
+
+def _columns(frequency_hz: float, data: _Data) -> np.ndarray:
+    """Real design columns (cosine, sine part) of one line, weighted, flat; shape (pairs * bands, 2)."""
+    response = difference_response(frequency_hz, data.clock) * np.sqrt(data.weight)
+    return np.stack([response.real.ravel(), -response.imag.ravel()], 1)
+
+
+def _fit_lines(frequencies: np.ndarray, data: _Data, columns: dict[float, np.ndarray]):
+    """Joint least squares of all lines; returns complex coefficients, residual (pairs, bands) and the normal inverse."""
+    for f in frequencies:
+        if f not in columns:
+            columns[f] = _columns(f, data)
+    design = np.concatenate([columns[f] for f in frequencies], 1)
+    target = (data.values * np.sqrt(data.weight)).ravel()
+    normal = design.T @ design
+    # lines half a resolution cell apart share their power: a slight ridge keeps the shares finite
+    inverse = np.linalg.inv(normal + np.eye(len(normal)) * 1e-6 * np.trace(normal) / len(normal))
+    solution = inverse @ (design.T @ target)
+    root = np.sqrt(np.where(data.weight > 0, data.weight, 1.0))
+    fitted = (design @ solution).reshape(data.values.shape)
+    residual = np.where(data.weight > 0, data.values - fitted / root, 0.0)
+    return solution[0::2] + 1j * solution[1::2], residual, inverse
+
+
+def _refine(frequencies: np.ndarray, free: np.ndarray, data: _Data, columns: dict[float, np.ndarray], turns: int = 4):
+    """Gauss-Newton on the frequencies of the steady lines, all together (variable projection's Kaufman step)."""
+    limit = 0.5 / data.duration_s
+    for _ in range(turns):
+        coefficients, residual, _ = _fit_lines(frequencies, data, columns)
+        if not free.any():
+            break
+        root = np.sqrt(data.weight)
+        slopes = []
+        for f, c in zip(frequencies[free], coefficients[free]):
+            slopes.append((_frequency_slope(f, c, data) * root).ravel())
+        slopes = np.stack(slopes, 1)
+        design = np.concatenate([columns[f] for f in frequencies], 1)
+        full = np.concatenate([design, slopes], 1)
+        step = np.linalg.lstsq(full, (residual * root).ravel(), rcond=1e-8)[0][design.shape[1]:]
+        step = np.clip(step, -limit, limit)
+        frequencies = frequencies.copy()
+        frequencies[free] += step
+        if np.abs(step).max() < 1e-4 / data.duration_s:
+            break
+    return frequencies
+
+
+def _frequency_slope(frequency_hz: float, coefficient: complex, data: _Data) -> np.ndarray:
+    """Derivative of a line's contribution with respect to its frequency, per hertz; shape (pairs, bands)."""
+    step = 0.02 / data.duration_s
+    middle = float(data.clock.frame_s.mean())  # phase referred to mid-record: nearly independent of the frequency
+    out = 0.0
+    for sign in (1, -1):
+        f = frequency_hz + sign * step
+        turn = np.exp(-2j * np.pi * sign * step * middle)
+        out = out + sign * np.real(coefficient * turn * difference_response(f, data.clock))
+    return out / (2 * step)
+
+
+@dataclass
+class _Bundle:
+    frequencies: np.ndarray
+    steady: bool
+
+
+def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) -> tuple[list[Tone], np.ndarray]:
+    """Tones of one axis, strongest first.
+
+    Parameters
+    ----------
+    data : from `axis_data`
+    axis : int
+        0 yaw, 1 pitch, 2 roll.
+    highest_hz : float
+        End of the search.
+    px_per_1920 : float
+        Native pixels per pixel of a 1920-wide picture (width / 1920).
+
+    Returns
+    -------
+    tones : list of Tone
+    residual : ndarray, shape (pairs, bands)
+        What the tones leave of the data.
+    """
+    clock = data.clock
+    grid = _search_grid(clock, data.duration_s, highest_hz)
+    seen = observable(grid, clock)
+    gain = difference_gain(grid, clock)
+    periodogram = _Periodogram(clock, grid)
+    independent = 2 * highest_hz * data.duration_s / 2
+    threshold = detection_ratio(independent)
+    least_px = LEAST_TONE_PX1920 * px_per_1920
+    samples = float(data.weight.sum() ** 2 / max((data.weight ** 2).sum(), 1e-12))
+
+    bundles: list[_Bundle] = []
+    columns: dict[float, np.ndarray] = {}
+    residual = data.values
+    blocked = ~seen
+    noise = None
+    while len(bundles) < MAX_TONES:
+        power = periodogram.power(residual, data.weight)
+        noise = _line_noise(power, grid)
+        hump = _hump_ratio(power, grid) > HUMP_RATIO
+        # amplitude of a sinusoid that would explain this much (power of a line: (A g / 2)^2 x samples)
+        amplitude = 2 * np.sqrt(power / max(samples, 1)) / np.maximum(gain, 1e-3)
+        candidate = ~blocked & ((power > threshold * noise) | hump) & (amplitude > least_px)
+        if not candidate.any():
+            break
+        at = int(np.argmax(np.where(candidate, power, 0)))
+        start = _all(bundles)
+        frequencies = np.append(start, grid[at])
+        free = np.array([b.steady for b in bundles for _ in b.frequencies] + [True])
+        moved = _refine(frequencies, free, data, columns, 3)
+        _put(bundles, moved[:-1])
+        new = _Bundle(np.array([np.clip(moved[-1], grid[at] - 1 / data.duration_s, grid[at] + 1 / data.duration_s)]), True)
+        bundles.append(new)
+        coefficients, residual, _ = _fit_lines(_all(bundles), data, columns)
+        new = _widen(new, bundles, coefficients[-1], residual, periodogram, gain, samples, data)
+        bundles[-1] = new
+        coefficients, residual, _ = _fit_lines(_all(bundles), data, columns)
+        reach = max(1.0 / data.duration_s, float(np.ptp(new.frequencies)) / 2 + 1 / data.duration_s)
+        blocked = blocked | (np.abs(grid - new.frequencies.mean()) < reach)
+        blocked = blocked | _trace_mask(grid, new, coefficients, bundles, clock, amplitude)
+    if not bundles:
+        return [], residual
+    frequencies = _refine(_all(bundles), np.array([b.steady for b in bundles for _ in b.frequencies]), data, columns)
+    _put(bundles, frequencies)
+    coefficients, residual, inverse = _fit_lines(frequencies, data, columns)
+    tones = _describe(bundles, frequencies, coefficients, inverse, residual, periodogram, data, axis)
+    tones = [t for t in tones if t.amplitude_px >= least_px]
+    return sorted(tones, key=lambda t: -t.amplitude_px), residual
+
+
+def _all(bundles: list[_Bundle]) -> np.ndarray:
+    return np.concatenate([b.frequencies for b in bundles]) if bundles else np.zeros(0)
+
+
+def _put(bundles: list[_Bundle], frequencies: np.ndarray) -> None:
+    at = 0
+    for bundle in bundles:
+        bundle.frequencies = frequencies[at:at + len(bundle.frequencies)]
+        at += len(bundle.frequencies)
+
+
+def _widen(new, bundles, coefficient, residual, periodogram, gain, samples, data) -> _Bundle:
+    """Turn a line into a bundle where its neighbourhood still holds power that one line cannot explain."""
+    grid, centre = periodogram.frequency_hz, float(new.frequencies[0])
+    left = periodogram.power(residual, data.weight)
+    around = float(np.interp(centre, grid, _side_noise(left, grid, MAX_WANDER * grid, 20.0)))
+    amplitude = 2 * np.sqrt(left / max(samples, 1)) / np.maximum(gain, 1e-3)
+    strong = (np.abs(grid - centre) <= MAX_WANDER * centre) & (left > 3 * around) & (amplitude > WANDER_SHARE * abs(coefficient))
+    # neighbours a resolution cell or more away may be tones of their own: a bundle needs a dense cluster of them
+    spacing = 1.0 / data.duration_s
+    occupied = set(np.round((grid[strong] - centre) / spacing).astype(int).tolist()) | {0}
+    low = high = 0
+    while occupied & {low - 1, low - 2}:
+        low -= 1
+    while occupied & {high + 1, high + 2}:
+        high += 1
+    if high - low < 3:
+        return new
+    lines = centre + np.arange(low - 1, high + 2) * spacing
+    others = _all([b for b in bundles if b is not new])
+    if len(others):
+        lines = lines[np.min(np.abs(lines[:, None] - others), axis=1) > 0.5 * spacing]
+    return _Bundle(lines, False) if len(lines) > 3 else new
+
+
+def _trace_mask(grid, new, coefficients, bundles, clock, amplitude) -> np.ndarray:
+    """Where a residual of this tone's own making may stand: its aliases and the encoder's half-rate side lobes."""
+    own = np.sqrt(np.sum(np.abs(coefficients[-len(new.frequencies):]) ** 2))
+    centre = float(np.mean(new.frequencies))
+    half = max(1.5, float(np.ptp(new.frequencies)) / 2 + 0.5)
+    steps = (grid - centre) / (0.5 * clock.frame_rate_hz)
+    image = (grid + centre) / (0.5 * clock.frame_rate_hz)
+    width = half / (0.5 * clock.frame_rate_hz)
+    near = (np.abs(steps - np.round(steps)) < width) | (np.abs(image - np.round(image)) < width)
+    return near & (amplitude < CODING_TRACE * own)
+
+
+def _describe(bundles, frequencies, coefficients, inverse, residual, periodogram, data, axis) -> list[Tone]:
+    grid = periodogram.frequency_hz
+    noise = _line_noise(periodogram.power(residual, data.weight), grid)
+    out, at = [], 0
+    for bundle in bundles:
+        index = np.arange(at, at + len(bundle.frequencies))
+        at += len(index)
+        f, c = frequencies[index], coefficients[index]
+        # noise ordinates are per sum of squared weights, the normal matrix is per sum of weights
+        s2 = float(np.interp(f.mean(), grid, noise)) * float((data.weight ** 2).sum() / data.weight.sum())
+        variance = inverse[2 * index, 2 * index] * s2, inverse[2 * index + 1, 2 * index + 1] * s2
+        if bundle.steady:
+            out.append(_steady_tone(axis, f[0], c[0], variance, s2, data))
+        else:
+            out.append(_wandering_tone(axis, f, c, variance, data))
+    return out
+
+
+def _steady_tone(axis, f, c, variance, s2, data) -> Tone:
+    amplitude = abs(c)
+    slope = _frequency_slope(f, c, data) * np.sqrt(data.weight)
+    curvature = float((slope ** 2).sum())
+    frequency_ci = 1.96 * np.sqrt(s2 / max(curvature, 1e-30))
+    along = (c.real ** 2 * variance[0][0] + c.imag ** 2 * variance[1][0]) / max(amplitude ** 2, 1e-30)
+    amplitude_ci = np.hypot(1.96 * np.sqrt(along), AMPLITUDE_SYSTEMATIC * amplitude)
+    return Tone(axis, float(f), float(frequency_ci), float(amplitude), float(amplitude_ci), 0.0, (Line(float(f), complex(c)),))
+
+
+def _wandering_tone(axis, f, c, variance, data) -> Tone:
+    t = data.clock.frame_s
+    envelope = np.exp(2j * np.pi * np.outer(t - t.mean(), f)) @ (c * np.exp(2j * np.pi * t.mean() * f))
+    noise = float((variance[0] + variance[1]).sum())
+    power = max(float(np.mean(np.abs(envelope) ** 2)) - noise, 1e-12)
+    weight = np.abs(envelope) ** 2
+    turning = np.gradient(np.unwrap(np.angle(envelope * np.exp(-2j * np.pi * (t - t.mean()) * f.mean()))), t) / (2 * np.pi)
+    mean = float(f.mean() + np.sum(weight * turning) / weight.sum())
+    spread = float(np.sqrt(np.sum(weight * (f.mean() + turning - mean) ** 2) / weight.sum()))
+    amplitude = np.sqrt(power)
+    amplitude_ci = np.hypot(1.96 * np.sqrt(noise / len(f) * 2), AMPLITUDE_SYSTEMATIC * amplitude)
+    independent = max(1.0, data.duration_s * 2 * max(spread, 1e-3))
+    frequency_ci = 1.96 * spread / np.sqrt(independent) + 0.1 / data.duration_s
+    lines = tuple(Line(float(a), complex(b)) for a, b in zip(f, c))
+    return Tone(axis, mean, float(frequency_ci), float(amplitude), float(amplitude_ci), spread, lines)
