@@ -11,7 +11,6 @@ import heapq
 import math
 import os
 import re
-import stat
 import struct
 from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass
@@ -22,6 +21,8 @@ from typing import Any, NamedTuple
 
 import av
 import numpy as np
+
+from framegrade.paths import shown, unreadable_cause
 
 #: File name endings that a folder is searched for (a file named outright is tried whatever its ending).
 CLIP_EXTENSIONS = frozenset(
@@ -42,21 +43,6 @@ _NOMINAL_TOLERANCE = 3e-4  # less than a third of the 0.1 % between 30 and 29.97
 
 #: Consecutive failed reads after which the rest of a file is given up as unreadable.
 _MAX_FAILED_READS = 16
-
-
-def shown(path: str | os.PathLike[str]) -> str:
-    """A file name that fits into one line of text: control characters and undecodable bytes are escaped.
-
-    Parameters
-    ----------
-    path : str or path-like
-
-    Returns
-    -------
-    str
-    """
-    text = os.fspath(path)
-    return "".join(c if c.isprintable() else c.encode("unicode_escape").decode("ascii") for c in text)
 
 
 class FootageError(Exception):
@@ -366,27 +352,6 @@ def timecode(time_s: float, frame_rate_hz: float | Fraction, start_timecode: str
 # --- opening ---------------------------------------------------------------------------------------------------------
 
 
-def _check_readable(path: Path) -> os.stat_result:
-    """Everything that can be said about a path without decoding: raises FootageError, or returns its status."""
-    try:
-        status = path.stat()
-        if stat.S_ISDIR(status.st_mode):
-            raise FootageError(path, "is a folder, not a clip")
-        if not stat.S_ISREG(status.st_mode):
-            raise FootageError(path, "is not a regular file")
-        with path.open("rb"):
-            pass
-    except FileNotFoundError:
-        raise FootageError(path, "there is no such file") from None
-    except PermissionError:
-        raise FootageError(path, "cannot be read: permission denied") from None
-    except (OSError, ValueError) as error:
-        raise FootageError(path, f"cannot be opened: {getattr(error, 'strerror', None) or error}") from None
-    if status.st_size == 0:
-        raise FootageError(path, "the file is empty")
-    return status
-
-
 def _index_is_missing(path: Path) -> bool:
     """True for an ISO base media file (ISO/IEC 14496-12) whose top-level boxes hold no `moov`: the index a camera
     writes last."""
@@ -408,7 +373,11 @@ def _index_is_missing(path: Path) -> bool:
 
 
 def _open(path: Path) -> av.container.InputContainer:
-    _check_readable(path)
+    cause = unreadable_cause(path, "a clip")
+    if cause is None and not path.stat().st_size:
+        cause = "the file is empty"
+    if cause is not None:
+        raise FootageError(path, cause)
     try:
         # "file:" and an absolute path, because FFmpeg takes a bare name with a colon for a protocol; and the
         # whitelist, so that a file that points elsewhere can reach nothing over a network.
