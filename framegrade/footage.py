@@ -443,43 +443,56 @@ def _first_frame(path: Path, container: av.container.InputContainer, stream: av.
 def _packets(
     container: av.container.InputContainer, stream: av.VideoStream, faults: ReadFaults
 ) -> Iterator[av.Packet]:
-    """Packets of one stream to the end, reading on after errors as far as the container allows."""
+    """Packets of one stream to the end, reading on after errors as far as the container allows.
+
+    The last one is empty and asks the decoder for what it still holds. A packet before it that the end of the file cut
+    in two is left out: its frame would be half a picture, and the error it gives a decoder of several threads comes in
+    place of the good frames asked for last.
+    """
     failures = 0
+    held = None
+    flush = av.Packet()
+    flush.stream = stream
     while failures < _MAX_FAILED_READS:
         try:
             for packet in container.demux(stream):
                 failures = 0
-                yield packet
-            return
+                if packet.size:
+                    if held is not None:
+                        yield held
+                    held = packet
+            break
         except av.FFmpegError:
             faults.read_errors += 1
             failures += 1
-    # The decoder still holds frames; an empty packet asks for them.
-    flush = av.Packet()
-    flush.stream = stream
+    if held is not None and not held.is_corrupt:
+        yield held
     yield flush
 
 
 @dataclass(frozen=True)
 class _Index:
-    """What a sample table says: presented frames, all entries, and whether they are unevenly spaced."""
+    """What a table of samples says: presented frames, all entries, their bytes, and whether they are unevenly spaced."""
 
     frames: int
     entries: int
+    coded_bytes: int
     uneven: bool
 
 
 def _sample_index(container: av.container.InputContainer, stream: av.VideoStream) -> _Index | None:
-    """The sample table of an ISO base media file; None where the container has none that lists every frame."""
-    if "mov" not in container.format.name.split(",") or not stream.frames:
+    """The table of samples of an ISO base media file or an AVI; None where none lists every frame."""
+    if not stream.frames:
         return None
     entries = list(stream.index_entries)
-    if not entries:
+    # An edit list may leave frames of an ISO file out; elsewhere the table must be whole to be one of all frames.
+    if not entries or ("mov" not in container.format.name.split(",") and len(entries) != stream.frames):
         return None
     ticks = np.diff([entry.timestamp for entry in entries])
     return _Index(
         frames=sum(not entry.is_discard for entry in entries),
         entries=len(entries),
+        coded_bytes=sum(entry.size for entry in entries),
         uneven=bool(ticks.size and ticks.max() - ticks.min() > 1),
     )
 
@@ -561,7 +574,7 @@ def probe(path: str | os.PathLike[str]) -> ClipInfo:
             variable = True if abs(stream.average_rate / stream.base_rate - 1) > 0.001 else None
 
         file_bytes = path.stat().st_size
-        bits_per_s = stream.bit_rate or 8 * file_bytes / duration_s
+        bits_per_s = 8 * index.coded_bytes / duration_s if index else stream.bit_rate or 8 * file_bytes / duration_s
         return ClipInfo(
             path=path,
             width_px=frame.width,
@@ -664,12 +677,9 @@ def luma_plane(frame: av.VideoFrame) -> np.ndarray:
         frame = frame.reformat(format=layout.target)
     plane = frame.planes[0]
     stride = plane.line_size
-    rows = np.frombuffer(plane, dtype=layout.dtype).reshape(frame.height, abs(stride) // layout.dtype.itemsize)
-    luma = rows[:, : frame.width]
-    if stride < 0:  # stored bottom row first
-        luma = luma[::-1]
-    luma.flags.writeable = False  # the decoder still predicts from these samples
-    return luma
+    samples = np.frombuffer(memoryview(plane).toreadonly(), layout.dtype)  # the decoder still predicts from them
+    luma = samples.reshape(frame.height, abs(stride) // layout.dtype.itemsize)[:, : frame.width]
+    return luma[::-1] if stride < 0 else luma  # negative: stored bottom row first
 
 
 # --- reading ---------------------------------------------------------------------------------------------------------
@@ -741,31 +751,23 @@ def _read(
         stream.codec_context.thread_type = "AUTO"
 
         form = None
-        coded: dict[int, tuple[int, bool]] = {}  # timestamp -> (coded size, cut short by the container)
+        damage = _Damage(by_time=not clock.in_decoding_order)
         packets = discarded = decoded = 0
-        broken = False  # something since the last key frame did not decode intact
         for packet in _packets(container, stream, faults):
             if packet.size:
                 packets += 1
                 discarded += packet.is_discard
                 clock.note(packet)
-                if packet.pts is not None and not packet.is_discard and not clock.in_decoding_order:
-                    coded[packet.pts] = (packet.size, packet.is_corrupt)
+                damage.sent(packet)
             try:
                 frames = packet.decode()
             except av.FFmpegError:
                 faults.decode_errors += 1
-                broken = True
+                damage.refused()
                 continue
             for frame in frames:
                 decoded += 1
-                # Frames come in order of time: an earlier packet still waiting has lost its frame without an error.
-                lost = [pts for pts in coded if frame.pts is not None and pts < frame.pts]
-                for pts in lost:
-                    del coded[pts]
-                size_bytes, cut_short = coded.pop(frame.pts, (None, False))
-                intact = not (frame.is_corrupt or cut_short)
-                broken = not intact or ((broken or bool(lost)) and not frame.key_frame)
+                coded, damaged = damage.received(frame)
                 time_s = clock.time_s(frame, faults)
                 if time_s is None:
                     continue
@@ -782,10 +784,10 @@ def _read(
                     luma = luma_plane(frame)
                 except ValueError as error:
                     raise FootageError(path, f"its pixel format {frame.format.name} cannot be read: {error}") from None
-                faults.damaged_frames += broken
+                faults.damaged_frames += damaged
                 faults.frames += 1
                 faults.read_s = time_s + clock.interval_s
-                yield Frame(faults.frames - 1, time_s, luma, bool(frame.key_frame), size_bytes, broken)
+                yield Frame(faults.frames - 1, time_s, luma, coded.key, coded.size_bytes, damaged)
         if not decoded:
             raise FootageError(path, "holds no frame that can be decoded")
         faults.lost_frames = max(0, packets - discarded - decoded)
@@ -814,6 +816,71 @@ def _ends_early(clock: _Clock, promised_s: float, missing: int | None) -> bool:
     if clock.last_s is None or math.isnan(promised_s):
         return missing is not None
     return promised_s - clock.last_s > clock.interval_s * 1.5 + (0.5 if missing is None else 0.0)
+
+
+class _Coded(NamedTuple):
+    """A packet's coded size (None: cannot be told), whether it is a key frame, and cut short in the file.
+
+    The packet's word for a key frame is taken: after damage decoders give the mark to frames that are none.
+    """
+
+    size_bytes: int | None
+    key: bool
+    corrupt: bool
+
+
+class _Damage:
+    """Tells which frames are not intact, themselves or by what they may be predicted from.
+
+    Frames are predicted from others of their group of pictures: a key frame and what is coded after it, up to the next.
+    So a fault taints the frames of its group that come out after it, but not the key frame. Frames shown before the key
+    frame they are coded after may lean on the group before as well.
+
+    Frames are told by their timestamps (`by_time`). Without these the groups are those of the frames as they come out.
+    """
+
+    def __init__(self, by_time: bool) -> None:
+        self._by_time = by_time
+        self._group = 0  # of the latest packet
+        self._tainted: set[int] = set()
+        self._keys: dict[int, int] = {}  # group -> time of its key frame
+        self._waiting: dict[int, tuple[_Coded, int]] = {}  # time -> (packet, group)
+        self._shown_broken = False
+
+    def sent(self, packet: av.Packet) -> None:
+        """Take note of a packet about to be decoded."""
+        if packet.is_keyframe:
+            self._group += 1
+        if packet.pts is None or not self._by_time:
+            return
+        if packet.is_keyframe:
+            self._keys[self._group] = packet.pts
+        if not packet.is_discard:
+            self._waiting[packet.pts] = (_Coded(packet.size, packet.is_keyframe, packet.is_corrupt), self._group)
+
+    def refused(self) -> None:
+        """The decoder reported an error on the latest packet, or (with several threads) one shortly before."""
+        self._tainted |= {self._group} | {group for _, group in self._waiting.values()}
+        self._shown_broken = True
+
+    def received(self, frame: av.VideoFrame) -> tuple[_Coded, bool]:
+        """What is known of a decoded frame's packet, and whether the frame is damaged."""
+        # Frames come in order of time: an earlier packet still waiting has lost its frame without an error.
+        for pts in [pts for pts in self._waiting if frame.pts is not None and pts < frame.pts]:
+            self._tainted.add(self._waiting.pop(pts)[1])
+        coded, group = self._waiting.pop(frame.pts, (_Coded(None, bool(frame.key_frame), False), None))
+        faulty = coded.corrupt or frame.is_corrupt
+        self._shown_broken = faulty or (self._shown_broken and not coded.key)
+        if group is None:
+            return coded, self._shown_broken
+        if faulty:
+            self._tainted.add(group)
+        leading = frame.pts < self._keys.get(group, frame.pts)
+        leans_on = {group, group - 1} if leading else {group}
+        damaged = faulty or (not coded.key and bool(self._tainted & leans_on))
+        self._tainted = {old for old in self._tainted if old >= group - 2}
+        self._keys = {old: pts for old, pts in self._keys.items() if old >= group - 2}
+        return coded, damaged
 
 
 class _Clock:
