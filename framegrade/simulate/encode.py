@@ -2,22 +2,23 @@
 
 from __future__ import annotations
 
+import os
 from fractions import Fraction
 from pathlib import Path
 
 import av
 import numpy as np
 
-from .recipe import Encode, Flight, FlightError
+from .recipe import Flight, FlightError
 
 _ENCODERS = {
     "h264": ("libx264",), "hevc": ("libx265",), "mjpeg": ("mjpeg",), "prores": ("prores_ks", "prores"),
     "vp9": ("libvpx-vp9",), "av1": ("libsvtav1", "libaom-av1"),
 }
-_PIXEL_FORMAT = {"mjpeg": "yuvj420p", "prores": "yuv422p10le"}
-#: Container that holds each codec by default.
-SUFFIX = {"h264": ".mp4", "hevc": ".mp4", "mjpeg": ".mov", "prores": ".mov", "vp9": ".mkv", "av1": ".mp4"}
+#: Container that holds each codec and keeps timestamps exact (Matroska would round them to milliseconds).
+SUFFIX = {"h264": ".mp4", "hevc": ".mp4", "mjpeg": ".mov", "prores": ".mov", "vp9": ".mp4", "av1": ".mp4"}
 _DEFAULT_BITS_PER_PIXEL = 0.15
+_STILL_QUALITY = 3
 
 
 def _encoder(codec: str) -> str:
@@ -27,23 +28,37 @@ def _encoder(codec: str) -> str:
     raise FlightError(f"encode.codec {codec}: this machine's video library has no encoder for it.")
 
 
-def _options(encode: Encode, encoder: str) -> dict[str, str]:
+def _bits_per_pixel(flight: Flight) -> float:
+    camera, encode = flight.camera, flight.encode
+    if encode.bit_rate_mbps is not None:
+        return encode.bit_rate_mbps * 1e6 / (camera.width_px * camera.height_px * float(camera.frame_rate))
+    return encode.bits_per_pixel or _DEFAULT_BITS_PER_PIXEL
+
+
+def _options(flight: Flight, encoder: str) -> dict[str, str]:
+    encode = flight.encode
     options: dict[str, str] = {}
+    if encoder == "prores_ks" and (encode.bit_rate_mbps or encode.bits_per_pixel):
+        # This encoder heeds no bit rate, only the bits of a macroblock of 16 x 16 pixels.
+        options["bits_per_mb"] = str(min(8192, max(128, round(256 * _bits_per_pixel(flight)))))
     if encoder in ("libx264", "libx265"):
         options["preset"] = encode.preset
     if encoder == "libx265":
         options["x265-params"] = "log-level=error"
+    if encoder == "libsvtav1":
+        options["svtav1-params"] = "lp=2"
     if encoder == "libvpx-vp9":
         options |= {"deadline": "realtime", "cpu-used": "6", "row-mt": "1"}
     if encoder == "libsvtav1":
         options["preset"] = "10"
     if encoder == "libaom-av1":
         options |= {"cpu-used": "8", "usage": "realtime"}
-    if encode.crf is not None:
-        if encoder == "mjpeg":
-            options["qscale"] = f"{max(encode.crf, 1):g}"
-        else:
-            options["crf"] = f"{encode.crf:g}"
+    if encode.codec == "mjpeg":
+        # The encoder's own rate control fails with fine timestamps; a fixed quantiser is what cameras use anyway.
+        quality = _STILL_QUALITY if encode.crf is None else min(31, max(1, round(encode.crf)))
+        options |= {"qmin": str(quality), "qmax": str(quality)}
+    elif encode.crf is not None:
+        options["crf"] = f"{encode.crf:g}"
     return options
 
 
@@ -68,23 +83,25 @@ class ClipWriter:
     def __init__(self, path: str | Path, flight: Flight, time_base: Fraction):
         camera, encode = flight.camera, flight.encode
         encoder = _encoder(encode.codec)
+        if encoder == "libsvtav1":
+            # It prints its settings on the terminal unless told otherwise this way.
+            os.environ.setdefault("SVT_LOG", "1")
         self._path = path
         self._time_base = time_base
         try:
             # Fixed metadata only: the same recipe should give the same file.
             self._container = av.open(str(path), "w", options={"fflags": "+bitexact"})
-            stream = self._container.add_stream(encoder, rate=camera.frame_rate, options=_options(encode, encoder))
+            stream = self._container.add_stream(encoder, rate=camera.frame_rate, options=_options(flight, encoder))
             stream.width, stream.height = camera.width_px, camera.height_px
-            stream.pix_fmt = encode.pixel_format or _PIXEL_FORMAT.get(encode.codec, "yuv420p")
+            stream.pix_fmt = encode.stored_format
             stream.time_base = time_base
             stream.codec_context.time_base = time_base
             stream.gop_size = encode.gop or max(1, round(camera.frame_rate))
             # A fixed number of encoder threads, so that a file does not depend on the machine's cores.
             stream.codec_context.thread_count = 2
             if encode.crf is None:
-                per_pixel = encode.bits_per_pixel or _DEFAULT_BITS_PER_PIXEL
-                rate = per_pixel * camera.width_px * camera.height_px * float(camera.frame_rate)
-                stream.bit_rate = round(encode.bit_rate_mbps * 1e6 if encode.bit_rate_mbps else rate)
+                pixels_per_s = camera.width_px * camera.height_px * float(camera.frame_rate)
+                stream.bit_rate = round(_bits_per_pixel(flight) * pixels_per_s)
             else:
                 stream.bit_rate = 0
         except (av.error.FFmpegError, OSError, ValueError) as error:

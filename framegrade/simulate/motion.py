@@ -455,20 +455,30 @@ def _matrix(angle: np.ndarray, moved: int, by: int) -> np.ndarray:
 def exposure_offsets(exposure_s: float, samples: int) -> np.ndarray:
     """Instants, relative to mid-exposure, whose plain average stands for the exposure.
 
-    Evenly spaced, and spread so that their variance is the exposure's own, `exposure^2 / 12`; a tone is then
-    averaged to `sinc(f exposure)` up to fourth order in `f exposure`.
+    Chebyshev's quadrature with equal weights (Abramowitz and Stegun 25.4.28): its nodes are the roots of the
+    polynomial whose power sums are the moments of the interval. Four nodes are exact to degree five, so a tone of
+    frequency f is averaged to `sinc(f exposure)` within 0.3 % of its amplitude up to `f exposure` = 0.7, and six nodes
+    within 0.1 % up to 1.
 
     Parameters
     ----------
     exposure_s : float
     samples : int
+        1 to 7; from eight on such nodes do not exist.
 
     Returns
     -------
     ndarray, shape (samples,)
+        Rising.
     """
-    middle = (np.arange(samples) + 0.5) / samples - 0.5
-    return exposure_s * middle / math.sqrt(1 - 1 / samples**2)
+    sums = [samples / (power + 1) if power % 2 == 0 else 0.0 for power in range(1, samples + 1)]
+    symmetric = [1.0]
+    for order in range(1, samples + 1):
+        # Newton's identities turn power sums into the coefficients of the polynomial.
+        terms = ((-1) ** (k - 1) * symmetric[order - k] * sums[k - 1] for k in range(1, order + 1))
+        symmetric.append(sum(terms) / order)
+    nodes = np.roots([(-1) ** k * value for k, value in enumerate(symmetric)])
+    return exposure_s / 2 * np.sort(nodes.real)
 
 
 def exposure_average(flight: Flight, time_s: np.ndarray) -> np.ndarray:

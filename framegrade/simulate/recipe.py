@@ -20,6 +20,7 @@ from typing import Any
 AXES = ("yaw", "pitch", "roll")
 CODECS = ("h264", "hevc", "mjpeg", "prores", "vp9", "av1")
 PIXEL_FORMATS = ("yuv420p", "yuvj420p", "yuv422p", "yuv444p", "yuv420p10le", "yuv422p10le")
+PRESETS = ("ultrafast", "superfast", "veryfast", "faster", "fast", "medium", "slow", "slower", "veryslow")
 PATTERNS = ("soil", "grass", "rows", "paving", "photo")
 
 
@@ -67,7 +68,7 @@ class Camera:
     readout_ms: float = _number(14.0, 0.0, 1000.0, "ms", "first to last row; 0 is a global shutter")
     exposure_ms: float = _number(1.0, 0.0, 1000.0, "ms", "shutter time of each row; 0 is an instant")
     hfov_deg: float = _number(80.0, 1.0, 150.0, "degrees", "horizontal field of view")
-    samples: int = _whole(4, 4, 8, "instants averaged over the exposure, and sub-rows of a pixel")
+    samples: int = _whole(4, 4, 7, "instants averaged over the exposure, and sub-rows of a pixel")
 
     @property
     def readout_s(self) -> float:
@@ -95,7 +96,10 @@ class Camera:
 
 @dataclass(frozen=True)
 class Encode:
-    """`[encode]`: codec and rate. At most one of the three rate keys; none means 0.15 bits per pixel."""
+    """`[encode]`: codec and rate. At most one of the three rate keys; none means 0.15 bits per pixel.
+
+    mjpeg takes only crf (a quantiser of 1 to 31, 3 by default) and prores only the rates; its default is the codec's.
+    """
 
     codec: str = _choice("h264", CODECS, "codec")
     bit_rate_mbps: float | None = _number(None, 0.01, 2000.0, "Mbit/s", "target rate")
@@ -103,7 +107,12 @@ class Encode:
     crf: float | None = _number(None, 0.0, 63.0, "", "constant quality; 0 is (nearly) lossless")
     pixel_format: str | None = _choice(None, PIXEL_FORMATS, "pixel format; by default the codec's usual one")
     gop: int | None = _whole(None, 1, 600, "frames from one key frame to the next; one second by default")
-    preset: str = _text("veryfast", "speed preset of the H.264 and HEVC encoders")
+    preset: str = _choice("veryfast", PRESETS, "speed preset of the H.264 and HEVC encoders")
+
+    @property
+    def stored_format(self) -> str:
+        """Pixel format that is stored: the one asked for, or the codec's usual one."""
+        return self.pixel_format or _FORMATS[self.codec][0]
 
 
 @dataclass(frozen=True)
@@ -322,6 +331,13 @@ class Flight:
     folder: str = ""
 
 
+# Pixel formats each codec can store, its usual one first.
+_FORMATS = {
+    "h264": ("yuv420p", "yuv422p", "yuv444p", "yuv420p10le", "yuv422p10le"),
+    "hevc": ("yuv420p", "yuv422p", "yuv444p", "yuv420p10le", "yuv422p10le"),
+    "mjpeg": ("yuvj420p",), "prores": ("yuv422p10le",), "vp9": ("yuv420p",), "av1": ("yuv420p", "yuv420p10le"),
+}
+
 _SINGLE = {
     "camera": Camera, "encode": Encode, "noise": Noise, "lamp": Lamp, "flight": Path3D, "isolator": Isolator,
     "scene": Scene,
@@ -414,7 +430,8 @@ def _convert(value: Any, meta: Mapping[str, Any]) -> tuple[Any, str]:
     if kind == "rate":
         rate = _rate(value)
         if rate is None or not meta["low"] <= rate <= meta["high"]:
-            return None, f'must be {meta["low"]} to {meta["high"]} frames/s, as a number or "30000/1001", not {value!r}.'
+            limits = f"{meta['low']} to {meta['high']} frames/s"
+            return None, f'must be {limits}, as a number or "30000/1001", not {value!r}.'
         return rate, ""
     if not isinstance(value, (list, tuple)):
         return None, f"must be a list of numbers, not {value!r}."
@@ -461,6 +478,15 @@ def _check(flight: Flight, where: _Where) -> Flight:
     rates = [key for key in ("bit_rate_mbps", "bits_per_pixel", "crf") if getattr(flight.encode, key) is not None]
     if len(rates) > 1:
         raise where.error("encode", 0, rates[1], f"cannot go with {rates[0]}; give only one of the two.")
+    codec, pixel_format = flight.encode.codec, flight.encode.pixel_format
+    if pixel_format is not None and pixel_format not in _FORMATS[codec]:
+        allowed = ", ".join(_FORMATS[codec])
+        raise where.error("encode", 0, "pixel_format", f"is {pixel_format!r} but {codec} stores only {allowed}.")
+    if flight.encode.crf is not None and codec == "prores":
+        raise where.error("encode", 0, "crf", "is not known to prores; give bit_rate_mbps or bits_per_pixel.")
+    for key in ("bit_rate_mbps", "bits_per_pixel"):
+        if getattr(flight.encode, key) is not None and codec == "mjpeg":
+            raise where.error("encode", 0, key, "is not known to mjpeg; give crf, a quantiser of 1 to 31.")
     if flight.scene.pattern == "photo" and not flight.scene.photo:
         raise where.error("scene", 0, "pattern", 'is "photo" but the key photo names no picture file.')
     lowest = flight.flight.height_m + min(0.0, flight.flight.climb_mps * flight.flight.duration_s)

@@ -36,7 +36,10 @@ def render(flight: Flight, out_path: str | Path, progress: Callable[[int, int], 
     frames = schedule(flight)
     world = build_world(flight)
     pool = noise_pool(flight)
-    writer = ClipWriter(out_path, flight, frames.time_base)
+    out_path = Path(out_path)
+    # Half a clip would pass for a whole one, so the clip gets its name only when it is whole.
+    part_path = out_path.with_name(f"{out_path.stem}.part{out_path.suffix}")
+    writer = ClipWriter(part_path, flight, frames.time_base)
     picture = None
     try:
         for index, exposed_s in enumerate(frames.exposed_s):
@@ -45,12 +48,12 @@ def render(flight: Flight, out_path: str | Path, progress: Callable[[int, int], 
             writer.add(picture, int(frames.pts_ticks[index]))
             if progress is not None:
                 progress(index + 1, frames.exposed_s.size)
+        writer.close()
     except BaseException:
-        # Half a clip would pass for a whole one.
         writer.abandon()
-        Path(out_path).unlink(missing_ok=True)
+        part_path.unlink(missing_ok=True)
         raise
-    writer.close()
+    part_path.replace(out_path)
     truth = truth_of(flight, frames)
     truth.save(out_path)
     return truth

@@ -69,8 +69,8 @@ def surface_from_grey(grey: np.ndarray, width_m: float, height_m: float) -> Surf
         new_rows, new_columns = (max(2 * round(size * shrink / 2), 2) for size in (rows, columns))
         if min(new_rows, new_columns) < 8:
             break
-        half = new_rows // 2
-        part = np.concatenate([spectrum[:half, : new_columns // 2 + 1], spectrum[rows - half :, : new_columns // 2 + 1]])
+        half, low = new_rows // 2, spectrum[:, : new_columns // 2 + 1]
+        part = np.concatenate([low[:half], low[rows - half :]])
         vertical = scipy.fft.fftfreq(new_rows)[:, None]
         horizontal = scipy.fft.rfftfreq(new_columns)[None, :]
         blur = np.exp(-0.5 * (2 * np.pi * _BLUR_TEXELS) ** 2 * (vertical**2 + horizontal**2)).astype(np.float32)
