@@ -819,11 +819,12 @@ class _Worker:
     """A process that measures clips one at a time. A pool of one each, rather than one pool of many: when a process
     dies it is certain whose clip it held, and the system tells what it died of."""
 
-    def __init__(self, measure: Measure, plot: Plot) -> None:
+    def __init__(self, measure: Measure, plot: Plot, threads: int) -> None:
         context = multiprocessing.get_context("spawn")  # a fork would copy the locks of decoder threads, held
         self.connection, other_end = context.Pipe()
         self.process = context.Process(target=_serve, args=(other_end, measure, plot), daemon=True)
-        self.process.start()
+        with _thread_share(threads):
+            self.process.start()
         other_end.close()  # so that the worker's death closes the pipe
 
     def stop(self) -> None:
@@ -840,6 +841,20 @@ class _Worker:
             with contextlib.suppress(ValueError):
                 return f"the process that measured it crashed ({signal.strsignal(-code) or signal.Signals(-code).name})"
         return f"the process that measured it ended early (exit status {code})"
+
+
+@contextlib.contextmanager
+def _thread_share(threads: int) -> Iterator[None]:
+    """Have numerical libraries in a process started meanwhile use no more threads than its share of the cores. They
+    read this once, when they are loaded; left to themselves each takes all cores, and several workers spend a good
+    part of their time waiting for each other. What the user has set stays."""
+    names = [name for name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS") if name not in os.environ]
+    os.environ.update(dict.fromkeys(names, str(threads)))
+    try:
+        yield
+    finally:
+        for name in names:
+            del os.environ[name]
 
 
 def _serve(connection: Connection, measure: Measure, plot: Plot) -> None:
@@ -886,7 +901,7 @@ def _isolated(jobs: Iterable[_Job], workers: int, measure: Measure, plot: Plot) 
                 while idle:
                     idle.pop().stop()
             while waiting and len(busy) < workers:
-                worker = idle.pop() if idle else _Worker(measure, plot)
+                worker = idle.pop() if idle else _Worker(measure, plot, waiting[0].settings.threads)
                 try:
                     worker.connection.send(waiting[0])
                 except OSError:  # died while idle: no clip's fault

@@ -296,7 +296,7 @@ def test_order_is_that_of_takes_csv_and_the_end_says_what_to_open(run):
     assert all(clip.endswith(name) for clip, name in zip(run.takes["clip"], names, strict=True))
     assert "4 clips: 1 keep, 1 stabilise, 1 reshoot, 1 failed." in text
     assert f"Results are in {run.out}" in text and "Open takes.csv first" in text
-    assert "Plots of the first take: clips/low_pass_with" in text
+    assert "Plots and series of the first take: clips/low_pass_with" in text
 
 
 def test_notes_are_told_once_with_their_clips(shoot):

@@ -734,6 +734,19 @@ def test_a_crash_takes_one_clip_with_it(card, measured, tmp_path):
     assert not list((card.out / "clips").glob(".partial*"))
 
 
+def _environment(path, settings, progress):
+    raise FootageError(path, f"{os.environ['OPENBLAS_NUM_THREADS']} {os.environ['OMP_NUM_THREADS']}")
+
+
+def test_workers_share_the_cores_out_unless_the_user_says_otherwise(card, monkeypatch):
+    card("a.mp4")
+    monkeypatch.delenv("OPENBLAS_NUM_THREADS", raising=False)
+    monkeypatch.setenv("OMP_NUM_THREADS", "7")
+    run = grade_all(card.folder, out=card.out, isolate=True, threads=3, measure=_environment)
+    assert run.failed == {"a.mp4": "3 7"}
+    assert "OPENBLAS_NUM_THREADS" not in os.environ
+
+
 _KILLED_RUN = """
 import sys
 sys.path.insert(0, {tests!r})

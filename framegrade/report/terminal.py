@@ -284,6 +284,7 @@ def take_lines(run: GradeRun, width: int) -> Iterator[Text]:
         if not failed:
             line.append(f" {_figure(take['score'], 0):>5} {mode:{mode_width}} {_figure(take['shake_px1920'], 2):>6} "
                         f"{_figure(take['jello_px1920'], 2):>6}  {_figure(take['strongest_hz'], 1, ' Hz'):>9}")
+        line.rstrip()
         yield line
         if not is_unknown(take["reason"]):
             yield from _indented(displayable(take["reason"]), rank_width + 2, width)
@@ -319,7 +320,7 @@ def closing_lines(run: GradeRun, width: int) -> Iterator[Text]:
     yield Text("Open takes.csv first: a row a clip, ranked.")
     if run.graded:
         folder = displayable(run.folder(run.graded[0]).relative_to(run.out).as_posix())
-        yield Text(f"Plots of the first take: {folder}/")
+        yield Text(f"Plots and series of the first take: {folder}/")
 
 
 def count_words(run: GradeRun) -> str:
