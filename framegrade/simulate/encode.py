@@ -88,8 +88,10 @@ class ClipWriter:
             os.environ.setdefault("SVT_LOG", "1")
         self._path = path
         self._time_base = time_base
+        if not Path(path).parent.is_dir():
+            raise FlightError(f"{path}: cannot be written, since its folder does not exist.")
         try:
-            # Fixed metadata only: the same recipe should give the same file.
+            # No dates or versions in the file: the same pictures should give the same file as far as encoders allow.
             self._container = av.open(str(path), "w", options={"fflags": "+bitexact"})
             stream = self._container.add_stream(encoder, rate=camera.frame_rate, options=_options(flight, encoder))
             stream.width, stream.height = camera.width_px, camera.height_px

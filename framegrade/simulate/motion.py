@@ -22,6 +22,7 @@ from .recipe import AXES, Camera, Flight, Pan, Tone
 # One number a kind of entry, so that adding a sway does not change the phases of the tones.
 _STREAM = {"sway": 1, "drift": 2, "tone": 3, "motors": 4, "broadband": 5, "cadence": 6, "noise": 7, "scene": 8}
 _WANDER_LINES = 64
+_BLOCK_VALUES = 1 << 16
 
 
 def generator(flight: Flight, stream: str, index: int = 0) -> np.random.Generator:
@@ -146,9 +147,14 @@ class Lines:
         """Add the sinusoids at `time_s` (T,) to `target` (T, columns)."""
         for column in range(target.shape[1]):
             use = self.column == column
-            if use.any():
-                angle = 2 * np.pi * np.outer(time_s, self.frequency_hz[use]) + self.phase_rad[use]
-                target[:, column] += np.sin(angle) @ self.amplitude[use]
+            # Blocks that stay in the processor's cache: dense broadband over long clips would fill the memory.
+            block = max(1, _BLOCK_VALUES // max(1, int(use.sum())))
+            for first in range(0, time_s.size if use.any() else 0, block):
+                part = slice(first, first + block)
+                turns = np.outer(time_s[part], self.frequency_hz[use]) + self.phase_rad[use] / (2 * np.pi)
+                # Whole turns off first: the sine of a small angle is several times faster.
+                turns -= np.rint(turns)
+                target[part, column] += np.sin(2 * np.pi * turns) @ self.amplitude[use]
 
 
 @dataclass(frozen=True)
