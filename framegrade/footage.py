@@ -37,7 +37,9 @@ _CONTAINERS = frozenset(
 
 #: Frame rates that cameras are set to, in hertz; a measured average this close is printed under the nominal figure.
 _NOMINAL_RATES_HZ = tuple(
-    base * factor for base in (24, 25, 30, 48, 50, 60, 90, 100, 120, 240) for factor in (Fraction(1), Fraction(1000, 1001))
+    base * factor
+    for base in (24, 25, 30, 48, 50, 60, 90, 100, 120, 240)
+    for factor in (Fraction(1), Fraction(1000, 1001))
 )
 _NOMINAL_TOLERANCE = 3e-4  # less than a third of the 0.1 % between 30 and 29.97
 
@@ -227,13 +229,15 @@ class ReadFaults:
             lost = max(self.lost_frames, self.decode_errors)
             found.append(f"{_times(lost, 'frame')} could not be decoded: the coded data are damaged")
         if self.damaged_frames:
-            found.append(f"{_times(self.damaged_frames, 'frame')} decoded with visible damage possible")
+            found.append(f"{_times(self.damaged_frames, 'frame')} may be spoiled by damaged coded data")
         if self.missing_timestamps:
-            found.append(f"{_times(self.missing_timestamps, 'frame')} without a timestamp: placed at the nominal interval")
+            count = _times(self.missing_timestamps, "frame")
+            found.append(f"{count} without a timestamp: placed at the nominal interval")
         if self.unordered_timestamps:
             found.append(f"{_times(self.unordered_timestamps, 'frame')} dropped: the timestamp did not advance")
         if self.other_size_frames:
-            found.append(f"{_times(self.other_size_frames, 'frame')} dropped: the picture size or format changed mid-clip")
+            count = _times(self.other_size_frames, "frame")
+            found.append(f"{count} dropped: the picture size or format changed mid-clip")
         return tuple(found)
 
 
@@ -472,7 +476,7 @@ def _packets(
 
 @dataclass(frozen=True)
 class _Index:
-    """What a table of samples says: presented frames, all entries, their bytes, and whether they are unevenly spaced."""
+    """What a table of samples says: presented frames, all entries, their bytes, and whether the spacing is uneven."""
 
     frames: int
     entries: int
@@ -725,7 +729,8 @@ def read_frames(
     path = Path(path)
     container = _open(path)
     stream = _choose_stream(path, container)
-    return _read(path, container, stream, threads, on_fault, ReadFaults() if faults is None else faults, start_s, stop_s)
+    faults = ReadFaults() if faults is None else faults
+    return _read(path, container, stream, threads, on_fault, faults, start_s, stop_s)
 
 
 def _read(
@@ -788,7 +793,7 @@ def _read(
                 faults.frames += 1
                 faults.read_s = time_s + clock.interval_s
                 yield Frame(faults.frames - 1, time_s, luma, coded.key, coded.size_bytes, damaged)
-        if not decoded:
+        if not decoded and whole:
             raise FootageError(path, "holds no frame that can be decoded")
         faults.lost_frames = max(0, packets - discarded - decoded)
         if whole:

@@ -240,7 +240,8 @@ def test_every_path_of_the_toml_reader_has_a_line():
         found = set(statement_lines(text))
         assert found <= document_paths
         # Tables that a header makes on its way down ([x."y.z"] makes x) have no line of their own.
-        assert {path for path in document_paths - found if not any(other[: len(path)] == path for other in found)} == set()
+        rest = document_paths - found
+        assert {path for path in rest if not any(other[: len(path)] == path for other in found)} == set()
 
 
 SCHEMA = {
@@ -252,13 +253,15 @@ SCHEMA = {
 
 
 def test_schema_reads_nested_tables_and_keeps_occurrences(tmp_path):
-    path = written(tmp_path, "version = 2\nlimits.sway.clean = 3\n[[part]]\nhz = 4\n[[part]]\n[limits.window]\nsteps=[1,2.5]\n")
+    text = "version = 2\nlimits.sway.clean = 3\n[[part]]\nhz = 4\n[[part]]\n[limits.window]\nsteps=[1,2.5]\n"
+    path = written(tmp_path, text)
     settings = read_settings(path, SCHEMA)
     assert settings.table("")["version"] == 2
     assert settings.table("limits.sway") == {"clean": 3.0} and isinstance(settings.table("limits.sway")["clean"], float)
     assert settings.table("limits.window") == {"steps": (1.0, 2.5)}
     assert settings.tables["part"] == [{"hz": 4.0}, {}]
-    assert (settings.line("limits.sway", "clean"), settings.line("part", nth=1), settings.line("part", "hz")) == (2, 5, 4)
+    lines = [settings.line("limits.sway", "clean"), settings.line("part", nth=1), settings.line("part", "hz")]
+    assert lines == [2, 5, 4]
     assert str(settings.error("is odd", "part", "hz")) == f"{path}, line 4: is odd"
 
 
