@@ -12,6 +12,8 @@ from pathlib import Path
 
 import numpy as np
 
+from framegrade.settings_file import Field, Table, read_settings
+
 COMPONENTS = ("sway", "shake", "jello", "smear", "cadence")
 #: Components that steadying the picture afterwards can take out.
 STEADIABLE = ("sway", "shake")
@@ -56,6 +58,53 @@ class Verdict:
 def default_limits_text() -> str:
     """The commented TOML of the default limits, for copying."""
     return resources.files("framegrade").joinpath("limits.toml").read_text(encoding="utf-8")
+
+
+def _pair(unit: str) -> Table:
+    field = Field("number", f"in {unit}", required=True, low=0, high=1e6, open_range=True)
+    return Table({f"clean_{unit}": field, f"spoiled_{unit}": field}, required=True)
+
+
+_SCHEMA = {name: _pair(unit) for name, unit in UNITS.items()} | {
+    "usable": Table({
+        "score": Field("number", "least score of a usable window", required=True, low=0, high=100),
+        "shortest_s": Field("number", "shortest usable part listed, seconds", required=True, low=0, high=3600),
+        "keep_s": Field("number", "usable part that keeps a take, seconds", required=True, low=0, high=3600),
+    }, required=True),
+    "stabilise": Table({"crop_pct": Field("number", "most of the picture steadying may cost, percent", required=True,
+                                          low=0, high=100)}, required=True),
+    "measured": Table({"least_pct": Field("number", "least share of the picture measured, percent", required=True,
+                                          low=0, high=100)}, required=True),
+}
+
+
+def load_limits(path: str | Path | None) -> Limits:
+    """Limits from a TOML file like `limits.toml`; None for the defaults.
+
+    Raises
+    ------
+    SettingsError
+        For a file that cannot be read or holds a mistake, naming the line.
+    """
+    if path is None:
+        with resources.as_file(resources.files("framegrade").joinpath("limits.toml")) as default:
+            return _limits(default)
+    return _limits(Path(path))
+
+
+def _limits(path: Path) -> Limits:
+    settings = read_settings(path, _SCHEMA)
+    tables = {name: settings.tables[name][0] for name in _SCHEMA}
+    pairs = {}
+    for name, unit in UNITS.items():
+        clean, spoiled = tables[name][f"clean_{unit}"], tables[name][f"spoiled_{unit}"]
+        if spoiled <= clean:
+            raise settings.error(f"spoiled_{unit} of [{name}] is {spoiled:g}, but must be above clean_{unit} ({clean:g})",
+                                 name, f"spoiled_{unit}")
+        pairs[name] = Limit(clean, spoiled)
+    usable = tables["usable"]
+    return Limits(**pairs, usable_score=usable["score"], shortest_s=usable["shortest_s"], keep_s=usable["keep_s"],
+                  crop_pct=tables["stabilise"]["crop_pct"], least_measured_pct=tables["measured"]["least_pct"])
 
 
 def component_score(figure: float, limit: Limit) -> float:

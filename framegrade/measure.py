@@ -20,7 +20,9 @@ from framegrade.path import Path as PicturePath
 from framegrade.path import SHAKE_ABOVE_HZ, crop_needed_pct, split_path
 from framegrade.picture import Cadence, disturbed_pairs, find_cadence_faults
 from framegrade.records import AXES, MOTION_COLUMNS, RANGE_COLUMNS, SPECTRUM_COLUMNS, TONE_COLUMNS, WINDOW_COLUMNS, TakeRecord
-from framegrade.rows import ASSUMED_HFOV_DEG, RowSignals, band_signals, cut, focal_length_px
+from framegrade.rows import (
+    ASSUMED_HFOV_DEG, RowSignals, band_mean, band_signals, cut, focal_length_px, remove_slow, slow_half_width,
+)
 from framegrade.spectrum.bands import band_power, third_octave_bands
 from framegrade.spectrum.folded import FoldedTone, find_folded_tones
 from framegrade.spectrum.levels import Levels, measure_levels
@@ -91,7 +93,7 @@ def resolve_optics(info: ClipInfo, settings: MeasureSettings) -> Optics:
             raise FootageError(info.path, f"a {name} of {value * 1e3:.4g} ms does not fit in the frame interval of "
                                           f"{interval * 1e3:.4g} ms ({info.mode})")
     source = "none" if readout is None else "given"
-    if settings.readout_s is None and mode is not None and getattr(mode, "readout_ci_s", None) is not None:
+    if settings.readout_s is None and mode is not None and getattr(mode, "readout_ci_ms", None) is not None:
         source = "measured"
     return Optics(readout, source, hfov, exposure, focal_length_px(info.width_px, hfov or ASSUMED_HFOV_DEG))
 
@@ -185,25 +187,17 @@ def _without(signals: RowSignals, disturbed: np.ndarray) -> RowSignals:
 def frame_steps(signals: RowSignals) -> np.ndarray:
     """Whole-picture motion from frame to frame, shape (pairs, 3): the slow part from all cells, the fast part as the
     plain mean over the bands (Legendre term 0), so that jello does not leak into it through unevenly textured bands."""
-    from framegrade.rows import remove_slow, slow_half_width
-
     whole = np.where(signals.measured[:, None] >= LEAST_FRAME_SHARE, signals.whole_px, np.nan)
     valid = np.isfinite(whole)
     half = slow_half_width(float(np.median(signals.next_time_s - signals.time_s)))
     slow = whole - np.where(valid, remove_slow(whole, valid, half), 0)
-    have = np.isfinite(signals.fast_px)
-    share = have.mean(1)
-    with np.errstate(all="ignore"):
-        mean = np.nansum(signals.fast_px, axis=1) / have.sum(1)
-    return np.where(share > 0.6, slow + mean, whole)
+    share = np.isfinite(signals.fast_px).mean(1)
+    return np.where(share > 0.6, slow + band_mean(signals.fast_px), whole)
 
 
 def in_frame_residual(signals: RowSignals) -> np.ndarray:
     """Band signals less the whole picture's: what rows do against each other, frame to frame; (pairs, bands, 3)."""
-    have = np.isfinite(signals.fast_px)
-    with np.errstate(all="ignore"):
-        mean = np.nansum(signals.fast_px, axis=1) / have.sum(1)
-    return signals.fast_px - mean[:, None, :]
+    return signals.fast_px - band_mean(signals.fast_px)[:, None, :]
 
 
 def analyse(signals: RowSignals, optics: Optics, width_px: int) -> Vibration:
@@ -320,9 +314,12 @@ def _jello_from_levels(readout_s, levels, weights, signals) -> Jello:
 
 def _jello_model_free(residual, signals, weights) -> Jello:
     """Without a readout: frame-difference residual over sqrt 2 (two frames' displacements, unrelated), noise taken off."""
-    with np.errstate(all="ignore"):
-        square = np.nanmean(residual ** 2, axis=1) @ weights / 2
-        noise = np.nanmean(np.where(np.isfinite(signals.variance_px2), signals.variance_px2, np.nan), axis=1) @ weights / 2
+    variance = signals.variance_px2
+    typical = np.nanmedian(np.where(np.isfinite(variance), variance, np.nan), axis=(0, 1)) if np.isfinite(variance).any() else 1.0
+    trust = np.where(np.isfinite(residual), 1 / (np.where(np.isfinite(variance), variance, 1.0) + typical), np.nan)
+    share = trust / band_mean(trust)[:, None, :]
+    square = band_mean(share * residual ** 2) @ weights / 2
+    noise = band_mean(np.where(np.isfinite(variance), share * variance, np.nan)) @ weights / 2
     times = 0.5 * (signals.time_s + signals.next_time_s)
     ok = np.isfinite(square) & np.isfinite(noise)
     if not ok.any():
@@ -471,8 +468,7 @@ def _motion_table(signals, path, cadence, residual, weights) -> pd.DataFrame:
     for name, part in (("sway", path.sway_px), ("shake", path.shake_px), ("travel", path.travel_px)):
         for axis, label in enumerate(AXES):
             table[f"{name}_{label}_px"] = part[:, axis]
-    with np.errstate(all="ignore"):
-        jello = np.sqrt(np.nanmean(residual ** 2, axis=1) @ weights / 2)
+    jello = np.sqrt(band_mean(residual ** 2) @ weights / 2)
     table["jello_px"] = np.append(jello, np.nan)
     table["measured_pct"] = np.append(100 * signals.measured, np.nan)
     table["frozen_pct"] = np.append(100 * signals.frozen, np.nan)

@@ -30,7 +30,7 @@ WORKING_WIDTH_PX = 1100
 COARSE_POINTS = 160
 MIN_POINTS = 12
 #: A residual above this many working pixels is outside the range where one linear solve holds.
-LINEAR_RANGE_PX = 0.6
+LINEAR_RANGE_PX = 0.05
 #: Bands the picture is cut into; 30 bands resolve 15 cycles per frame height.
 BANDS = 30
 COLUMNS = 16
@@ -155,7 +155,9 @@ def _prepare(time_s: float, luma: np.ndarray, luma_scale: float, grid: Grid) -> 
     step = grid.decimation
     height, width = grid.height_px // step * step, grid.width_px // step * step
     work = luma[:height, :width].astype(np.float32)
-    if step > 1:
+    if step == 2:
+        work = cv2.pyrDown(work, dstsize=(width // 2, height // 2))
+    elif step > 1:
         work = cv2.resize(work, (width // step, height // step), interpolation=cv2.INTER_AREA)
     if luma_scale != 1.0:
         work *= luma_scale
@@ -231,16 +233,11 @@ def _solve_cells(first: np.ndarray, warped: np.ndarray, inside: np.ndarray | Non
     cc = _cell_means(change * change, grid)
 
     count = grid.band_rows * grid.column_width
-    for _ in range(2):
-        # second pass: take the gradients' own noise, known from the residual, off the normal matrix
-        det = np.maximum(xx * yy - xy * xy, 1e-12)
-        rx, ry = (yy * bx - xy * by) / det, (xx * by - xy * bx) / det
-        residual = np.maximum(cc - rx * bx - ry * by, 1e-6)
-        if _ == 0:
-            noise = residual * _GRADIENT_NOISE_SHARE
-            limit = 0.3 * 0.5 * (xx + yy)
-            noise = np.minimum(noise, limit)
-            xx, yy = xx - noise, yy - noise
+    rx, ry, residual = _solve_normal(xx, xy, yy, bx, by, cc)
+    # the gradients' own noise, known from the residual, comes off the normal matrix
+    noise = np.minimum(residual * _GRADIENT_NOISE_SHARE, 0.15 * (xx + yy))
+    rx, ry, _ = _solve_normal(xx - noise, xy, yy - noise, bx, by, cc)
+    xx, yy = xx - noise, yy - noise
     # the smoothed residual has fewer independent samples than pixels
     information = np.stack([xx, xy, yy], -1) * (count * _INDEPENDENT_SHARE / residual)[..., None]
     half_trace, half_gap = 0.5 * (xx + yy), np.sqrt(0.25 * (xx - yy) ** 2 + xy ** 2)
@@ -254,13 +251,22 @@ def _solve_cells(first: np.ndarray, warped: np.ndarray, inside: np.ndarray | Non
     return _Solve(shift, information, float(half_trace.mean()))
 
 
+def _solve_normal(xx, xy, yy, bx, by, cc):
+    """Solution of the 2 x 2 normal equations of every cell, and the mean square they leave of `cc`."""
+    det = np.maximum(xx * yy - xy * xy, 1e-12)
+    rx, ry = (yy * bx - xy * by) / det, (xx * by - xy * bx) / det
+    return rx, ry, np.maximum(cc - rx * bx - ry * by, LEAST_RESIDUAL)
+
+
+#: Mean square residual (grey levels squared) that rounding to whole grey levels leaves even of a still picture.
+LEAST_RESIDUAL = 0.01
 #: Noise power of the shared gradient over that of the smoothed difference, for white pixel noise: the difference of two
 #: frames carries twice the noise, their mean half of it; the taps pass the sums of their squares.
 _GRADIENT_NOISE_SHARE = 0.25 * float(np.sum(DERIVE_TAPS ** 2) / np.sum(SMOOTH_TAPS ** 2))
 #: The smoothing taps leave about this share of the pixels independent (equivalent area of their autocorrelation).
 _INDEPENDENT_SHARE = 0.1
-#: Least information (1 / px^2, along the worst direction) for a cell to count: an uncertainty of 0.3 working px.
-MIN_CELL_INFORMATION = 1 / 0.3 ** 2
+#: Least information (1 / px^2, along the worst direction) for a cell to count: an uncertainty of 0.08 working px.
+MIN_CELL_INFORMATION = 1 / 0.08 ** 2
 
 
 def _warp_field(warp: np.ndarray, shift: np.ndarray, weight: np.ndarray, shape: tuple[int, int], grid: Grid) -> np.ndarray:
@@ -311,7 +317,7 @@ def measure_pair(first: _Picture, second: _Picture, grid: Grid) -> PairMotion:
     if reach < 1e-6:
         warped = second.work
     else:
-        flags = cv2.INTER_CUBIC | cv2.WARP_INVERSE_MAP
+        flags = cv2.INTER_LINEAR | cv2.WARP_INVERSE_MAP
         warped = cv2.warpPerspective(second.work, warp, shape[::-1], flags=flags, borderMode=cv2.BORDER_REPLICATE)
         inside = _inside_mask(warp, shape, grid)
     solve = _solve_cells(first.work, warped, None, grid)
@@ -323,7 +329,7 @@ def measure_pair(first: _Picture, second: _Picture, grid: Grid) -> PairMotion:
         if not used.any() or np.percentile(np.abs(shift[used]), 90) < LINEAR_RANGE_PX:
             break
         field = _warp_field(warp, _smooth_shift(shift, information[..., 0]), information[..., 0], shape, grid)
-        warped = cv2.remap(second.work, field[..., 0], field[..., 1], cv2.INTER_CUBIC, borderMode=cv2.BORDER_REPLICATE)
+        warped = cv2.remap(second.work, field[..., 0], field[..., 1], cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
         base = _sample_field(field, grid)
         solve = _solve_cells(first.work, warped, None, grid)
         information = solve.information

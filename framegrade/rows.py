@@ -24,12 +24,16 @@ from framegrade.motion import Grid, PairMotion
 
 #: Half-width of the local polynomial, seconds: passes what is slower than about 2 Hz, so removing it leaves 3 Hz and up.
 SLOW_HALF_WIDTH_S = 0.4
+#: The same for what is slower than about 0.4 Hz: the scene's own steady flow, set apart before sway is fitted.
+DRIFT_HALF_WIDTH_S = 2.2
 #: Field of view assumed for the *shape* of the rotation field when none is given (a common wide lens).
 ASSUMED_HFOV_DEG = 70.0
 BIWEIGHT_LIMIT = 4.685  # 95 % efficiency under normal errors (Huber, Ronchetti, Robust Statistics)
 #: Pairs per block: long enough for the temporal filter, short enough that memory does not grow with the clip.
 BLOCK_PAIRS = 480
 MIN_CELLS_PER_BAND = 4
+#: A band known no better than this (standard deviation, native pixels) counts as not measured.
+WORST_BAND_PX = 0.5
 
 
 def focal_length_px(width_px: int, hfov_deg: float) -> float:
@@ -86,13 +90,25 @@ class RowSignals:
         return len(self.time_s)
 
 
-def slow_half_width(interval_s: float) -> int:
-    """Half-width of the slow filter in frames, at least two."""
-    return max(2, round(SLOW_HALF_WIDTH_S / interval_s))
+def band_mean(values: np.ndarray) -> np.ndarray:
+    """Mean over the bands (axis 1) of what is not NaN; NaN where a pair has no band at all."""
+    have = np.isfinite(values)
+    count = have.sum(1)
+    return np.where(count > 0, np.where(have, values, 0).sum(1) / np.maximum(count, 1), np.nan)
+
+
+def slow_half_width(interval_s: float, half_width_s: float = SLOW_HALF_WIDTH_S) -> int:
+    """Half-width of a slow filter in frames, at least two."""
+    return max(2, round(half_width_s / interval_s))
 
 
 def remove_slow(values: np.ndarray, valid: np.ndarray | None, half_width: int) -> np.ndarray:
-    """Take a local quadratic in time off a series: a high-pass that copes with gaps and ends.
+    """Take `slow_part` off a series: a high-pass that copes with gaps and ends. Meaningless where `valid` is false."""
+    return values - slow_part(values, valid, half_width)
+
+
+def slow_part(values: np.ndarray, valid: np.ndarray | None, half_width: int) -> np.ndarray:
+    """Local quadratic in time of a series: a low-pass that copes with gaps and ends.
 
     Parameters
     ----------
@@ -106,7 +122,7 @@ def remove_slow(values: np.ndarray, valid: np.ndarray | None, half_width: int) -
     Returns
     -------
     ndarray
-        `values` less the local quadratic; where `valid` is false the result means nothing.
+        The local quadratic, bridging gaps shorter than the window.
     """
     taps = np.arange(-half_width, half_width + 1)
     window = np.cos(np.pi * taps / (2 * (half_width + 1))) ** 2
@@ -127,8 +143,7 @@ def remove_slow(values: np.ndarray, valid: np.ndarray | None, half_width: int) -
     det = s0 * (s2 * s4 - s3 * s3) - s1 * (s1 * s4 - s2 * s3) + s2 * (s1 * s3 - s2 * s2)
     top = t0 * (s2 * s4 - s3 * s3) - s1 * (t1 * s4 - t2 * s3) + s2 * (t1 * s3 - t2 * s2)
     with np.errstate(divide="ignore", invalid="ignore"):
-        slow = np.where(det > 1e-9 * np.maximum(s0, 1e-12) ** 3, top / det, t0 / np.maximum(s0, 1e-12))
-    return values - slow
+        return np.where(det > 1e-9 * np.maximum(s0, 1e-12) ** 3, top / det, t0 / np.maximum(s0, 1e-12))
 
 
 def rotation_basis(grid: Grid, focal_px: float) -> np.ndarray:
@@ -163,7 +178,7 @@ def _weighted_fit(values: np.ndarray, information: np.ndarray, weight: np.ndarra
     load = np.einsum("nbcij,bcjk->nbcik", full, basis)
     normal = np.einsum(f"nbcik,bcil->{out}kl", load, basis, optimize=True)
     right = np.einsum(f"nbcik,nbci->{out}k", load, values, optimize=True)
-    return normal, right
+    return normal.astype(float), right.astype(float)
 
 
 def _solve(normal: np.ndarray, right: np.ndarray, ridge: float = 1e-9):
@@ -185,7 +200,7 @@ def _distance(residual: np.ndarray, information: np.ndarray) -> np.ndarray:
 
 
 def _robust_bands(values: np.ndarray, information: np.ndarray, basis: np.ndarray, over: str):
-    """Biweight fit of the rotation to each band (or frame); returns fit, variance, cell weights and scatter."""
+    """Biweight fit of the rotation to each band (or frame); returns fit, variance and cell weights."""
     used = information[..., 0] > 0
     weight = used.astype(np.float32)
     spread = "nbk,bcik->nbci" if over == "c" else "nk,bcik->nbci"
@@ -202,7 +217,11 @@ def _robust_bands(values: np.ndarray, information: np.ndarray, basis: np.ndarray
         scale = np.maximum(scale, 1e-3)
         start = 3.0 if turn == 0 else 1.0  # a gentle first cut: the first fit is not robust yet
         weight = np.where(used, _biweight(distance / scale[:, None, None] / start), 0).astype(np.float32)
-    return fit, inverse * (scale ** 2).reshape((-1,) + (1,) * (inverse.ndim - 1)), weight, distance / scale[:, None, None]
+    return fit, inverse * (scale ** 2).reshape((-1,) + (1,) * (inverse.ndim - 1)), weight
+
+
+#: Information (xx, xy, yy) of cells that all count the same.
+_ALIKE = np.array([1, 0, 1], np.float32)
 
 
 def fit_block(pairs: list[PairMotion], grid: Grid, focal_px: float) -> RowSignals:
@@ -224,16 +243,23 @@ def fit_block(pairs: list[PairMotion], grid: Grid, focal_px: float) -> RowSignal
     information[frozen] = 0
     basis = rotation_basis(grid, focal_px).astype(np.float32)
 
-    whole, whole_variance, whole_weight, _ = _robust_bands(flow, information, basis, "bc")
-    half = slow_half_width(float(np.median(later - time)))
+    interval = float(np.median(later - time))
     valid = np.broadcast_to((information[..., 0] > 0)[..., None], flow.shape)
-    fast = remove_slow(flow, valid, half).astype(np.float32)
-    signal, variance, weight, _ = _robust_bands(fast, information, basis, "c")
+    # near and far ground flow at their own steady speeds: taken off cell by cell, they cannot pull the fit of the sway
+    steady = slow_part(flow, valid, slow_half_width(interval, DRIFT_HALF_WIDTH_S)).astype(np.float32)
+    # every cell counts alike here (scenery at other distances, not measuring noise, is what parts them), and a cell
+    # counts always or never: one that drops out whenever the picture swings would tie its steady flow to the swing
+    lasting = np.broadcast_to((information[..., :1] > 0).mean(0) > 0.5, information[..., :1].shape)
+    drift, _, _ = _robust_bands(steady, lasting * _ALIKE, basis, "bc")
+    sway, whole_variance, _ = _robust_bands(flow - steady, (information[..., :1] > 0) * _ALIKE, basis, "bc")
+    whole = drift + sway
+    fast = remove_slow(flow, valid, slow_half_width(interval)).astype(np.float32)
+    signal, variance, weight = _robust_bands(fast, information, basis, "c")
 
-    enough = (weight > 0.1).sum(-1) >= MIN_CELLS_PER_BAND
-    signal = np.where(enough[..., None], signal, np.nan)
-    variance = np.where(enough[..., None], variance, np.inf)
-    part = (weight > 0.1) & enough[..., None]
+    enough = ((weight > 0.1).sum(-1) >= MIN_CELLS_PER_BAND) & (variance > 0).all(-1)
+    known = enough[..., None] & (variance < WORST_BAND_PX ** 2)
+    signal, variance = np.where(known, signal, np.nan), np.where(known, variance, np.inf)
+    part = (weight > 0.1) & known.any(-1)[..., None]
     rise = np.einsum("nk,bck->nb", whole, basis[:, :, 1, :]) / grid.columns / grid.height_px
     return RowSignals(
         time, later, grid.height, grid.band_share, rise, signal, variance, whole, whole_variance, part.mean((1, 2)),
@@ -281,7 +307,7 @@ def band_signals(pairs: Iterable[PairMotion], grid: Grid, focal_px: float, block
     for pair in pairs:
         held.append(pair)
         if not reach:
-            reach = slow_half_width(max(pair.next_time_s - pair.time_s, 1e-4))
+            reach = slow_half_width(max(pair.next_time_s - pair.time_s, 1e-4), DRIFT_HALF_WIDTH_S)
         if len(held) >= block + 2 * reach:
             done = fit_block(held, grid, focal_px)
             parts.append(cut(done, lead, len(held) - reach))

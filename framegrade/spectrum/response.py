@@ -14,6 +14,8 @@ from framegrade.rows import RowSignals, remove_slow, slow_half_width
 
 #: A difference seen with less than this gain (2 at best) is called blind: noise is amplified by its inverse.
 BLIND_GAIN = 0.35
+#: Vibration whose alias is slower than this cannot be told from sway and passing scenery: blind as well.
+SLOWEST_ALIAS_HZ = 3.0
 
 
 @dataclass(frozen=True)
@@ -77,8 +79,6 @@ def difference_response(frequency_hz: float, clock: Clock) -> np.ndarray:
 
 def filter_gain(alias_hz: np.ndarray, clock: Clock) -> np.ndarray:
     """Amplitude gain of the temporal high-pass at frequencies as sampled by the frames; shape as `alias_hz`."""
-    taps = np.zeros(2 * clock.half_width * 2 + 1)
-    taps[len(taps) // 2] = 1.0
     # the impulse's own response, mid-record: away from the ends the filter is the same everywhere
     long = np.zeros(6 * clock.half_width + 1)
     long[3 * clock.half_width] = 1.0
@@ -95,7 +95,9 @@ def difference_gain(frequency_hz: np.ndarray, clock: Clock) -> np.ndarray:
 
 def observable(frequency_hz: np.ndarray, clock: Clock) -> np.ndarray:
     """True where a vibration enters with enough gain to be measured: outside the blind intervals."""
-    return difference_gain(frequency_hz, clock) > BLIND_GAIN
+    rate = clock.frame_rate_hz
+    alias = np.abs(frequency_hz - rate * np.round(np.asarray(frequency_hz) / rate))
+    return (difference_gain(frequency_hz, clock) > BLIND_GAIN) & (alias >= min(SLOWEST_ALIAS_HZ, 0.2 * rate))
 
 
 def highest_frequency_hz(clock: Clock, bands: int) -> float:

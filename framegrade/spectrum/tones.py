@@ -33,8 +33,9 @@ MAX_TONES = 12
 LOWEST_TONE_HZ = 4.0
 #: Systematic part of an amplitude's interval (95 %, relative), from the simulated campaign in tests/bench.
 AMPLITUDE_SYSTEMATIC = 0.04
-#: Encoders of alternating frame quality leave side lobes half a frame rate away, about this strong (relative).
-CODING_TRACE = 0.10
+#: What is left at a tone's own aliases, or half a frame rate away (encoders alternate the quality of frames), and no
+#: stronger than this share of it is a trace of that tone: two tones there by chance are far rarer.
+CODING_TRACE = 0.30
 OVERSAMPLING = 4
 MAX_WANDER = 0.05   # a bundle reaches this far either side of its strongest line (relative): wandering propellers
 #: A hump of summed power must stand this far above the density on both of its sides to be a wandering tone.
@@ -280,8 +281,8 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) ->
     bundles: list[_Bundle] = []
     columns: dict[float, np.ndarray] = {}
     residual = data.values
+    strengths: list[float] = []
     blocked = ~seen
-    noise = None
     while len(bundles) < MAX_TONES:
         power = periodogram.power(residual, data.weight)
         noise = _line_noise(power, grid)
@@ -289,6 +290,8 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) ->
         # amplitude of a sinusoid that would explain this much (power of a line: (A g / 2)^2 x samples)
         amplitude = 2 * np.sqrt(power / max(samples, 1)) / np.maximum(gain, 1e-3)
         candidate = ~blocked & ((power > threshold * noise) | hump) & (amplitude > least_px)
+        for bundle, own in zip(bundles, strengths):
+            candidate &= ~_trace_mask(grid, bundle.frequencies, own, clock, amplitude, 1 / data.duration_s)
         if not candidate.any():
             break
         at = int(np.argmax(np.where(candidate, power, 0)))
@@ -305,14 +308,14 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) ->
         coefficients, residual, _ = _fit_lines(_all(bundles), data, columns)
         reach = max(1.0 / data.duration_s, float(np.ptp(new.frequencies)) / 2 + 1 / data.duration_s)
         blocked = blocked | (np.abs(grid - new.frequencies.mean()) < reach)
-        blocked = blocked | _trace_mask(grid, new, coefficients, bundles, clock, amplitude)
+        strengths = _strengths(bundles, coefficients)
     if not bundles:
         return [], residual
     frequencies = _refine(_all(bundles), np.array([b.steady for b in bundles for _ in b.frequencies]), data, columns)
     _put(bundles, frequencies)
     coefficients, residual, inverse = _fit_lines(frequencies, data, columns)
     tones = _describe(bundles, frequencies, coefficients, inverse, residual, periodogram, data, axis)
-    tones = [t for t in tones if t.amplitude_px >= least_px]
+    tones = [t for t in tones if t.amplitude_px >= max(least_px, t.amplitude_ci_px)]
     return sorted(tones, key=lambda t: -t.amplitude_px), residual
 
 
@@ -345,22 +348,26 @@ def _widen(new, bundles, coefficient, residual, periodogram, gain, samples, data
     if high - low < 3:
         return new
     lines = centre + np.arange(low - 1, high + 2) * spacing
+    lines = lines[observable(lines, data.clock)]  # inside a blind interval a line would be noise over nearly nothing
     others = _all([b for b in bundles if b is not new])
     if len(others):
         lines = lines[np.min(np.abs(lines[:, None] - others), axis=1) > 0.5 * spacing]
     return _Bundle(lines, False) if len(lines) > 3 else new
 
 
-def _trace_mask(grid, new, coefficients, bundles, clock, amplitude) -> np.ndarray:
-    """Where a residual of this tone's own making may stand: its aliases and the encoder's half-rate side lobes."""
-    own = np.sqrt(np.sum(np.abs(coefficients[-len(new.frequencies):]) ** 2))
-    centre = float(np.mean(new.frequencies))
-    half = max(1.5, float(np.ptp(new.frequencies)) / 2 + 0.5)
-    steps = (grid - centre) / (0.5 * clock.frame_rate_hz)
-    image = (grid + centre) / (0.5 * clock.frame_rate_hz)
-    width = half / (0.5 * clock.frame_rate_hz)
+def _strengths(bundles: list[_Bundle], coefficients: np.ndarray) -> list[float]:
+    """Root of the summed power of each bundle's lines."""
+    edges = np.cumsum([0] + [len(b.frequencies) for b in bundles])
+    return [float(np.sqrt(np.sum(np.abs(coefficients[i:j]) ** 2))) for i, j in zip(edges[:-1], edges[1:])]
+
+
+def _trace_mask(grid, frequencies, strength, clock, amplitude, resolution_hz) -> np.ndarray:
+    """Where a residual of a tone's own making may stand: its aliases and the encoder's half-rate side lobes."""
+    centre, half_rate = float(np.mean(frequencies)), 0.5 * clock.frame_rate_hz
+    width = (float(np.ptp(frequencies)) / 2 + 2 * resolution_hz) / half_rate
+    steps, image = (grid - centre) / half_rate, (grid + centre) / half_rate
     near = (np.abs(steps - np.round(steps)) < width) | (np.abs(image - np.round(image)) < width)
-    return near & (amplitude < CODING_TRACE * own)
+    return near & (amplitude < CODING_TRACE * strength)
 
 
 def _describe(bundles, frequencies, coefficients, inverse, residual, periodogram, data, axis) -> list[Tone]:
