@@ -392,10 +392,10 @@ def _open(path: Path) -> av.container.InputContainer:
     except (av.FFmpegError, ValueError) as error:
         if _index_is_missing(path):
             cause = "has no index (moov box): the recording was cut off before the camera closed the file"
-        elif isinstance(error, av.InvalidDataError):
-            cause = "is not a video file, or its header is damaged"
+        elif isinstance(error, OSError):  # the card, not what is written on it
+            cause = f"cannot be read: {(error.strerror or str(error)).lower()}"
         else:
-            cause = f"cannot be opened as video: {getattr(error, 'strerror', None) or error}"
+            cause = "is not a video file, or its header is damaged"
         raise FootageError(path, cause) from None
     return container
 
