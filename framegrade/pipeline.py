@@ -207,7 +207,7 @@ def grade(
 
 
 def grade_all(
-    paths: Iterable[str | os.PathLike[str]], out: str | os.PathLike[str], *,
+    paths: str | os.PathLike[str] | Iterable[str | os.PathLike[str]], out: str | os.PathLike[str], *,
     camera: str | os.PathLike[str] | Camera | None = None, readout_ms: float | None = None,
     hfov_deg: float | None = None, exposure_ms: float | None = None,
     limits: str | os.PathLike[str] | Limits | None = None, jobs: int | None = None, threads: int | None = None,
@@ -218,7 +218,7 @@ def grade_all(
 
     Parameters
     ----------
-    paths : iterable of str or path-like
+    paths : str, path-like, or iterable of them
         Files, folders (searched at every depth) and patterns. `out`, and any other folder with results below a
         searched folder, is left out of the search.
     out : str or path-like
@@ -268,6 +268,8 @@ def grade_all(
     for name, value in (("jobs", jobs), ("threads", threads)):
         if value is not None and value < 1:
             raise UsageError(f"{name} must be 1 or more, not {value}.")
+    if isinstance(paths, (str, os.PathLike)):
+        paths = [paths]  # a lone path would be taken letter by letter
     arguments = [os.fspath(path) for path in paths]
     out = Path(os.path.abspath(out))
     clips = _find(arguments, out)

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import contextlib
 import functools
 import io
 import json
 import os
 import re
+import shlex
 import signal
 import subprocess
 import sys
@@ -15,6 +17,7 @@ import tomllib
 from pathlib import Path
 
 import fake_take
+import media
 import pytest
 from fake_take import clip_text, make_record
 from rich.cells import cell_len
@@ -22,6 +25,7 @@ from rich.console import Console
 
 import framegrade
 from framegrade import cli, pipeline
+from framegrade.grading import GRADES, default_limits_text, load_limits
 from framegrade.report import tables, terminal
 
 CONTROL = re.compile(r"[\x00-\x09\x0b-\x1f\x7f]")
@@ -46,8 +50,6 @@ def shoot(tmp_path, monkeypatch):
 
 def _quiet_measure(path, settings, progress):
     # In this process the fake's print would land in the output under test; worker processes redirect it.
-    import contextlib
-
     with contextlib.redirect_stdout(io.StringIO()):
         return fake_take.measure(path, settings, progress)
 
@@ -105,9 +107,11 @@ def test_wrong_settings_files_are_named_with_line_and_allowed_values(shoot, caps
                                    "frame_rate_hz = 60\nreadout_mss = 14\n")
     sentence = wrong_use(capsys, "grade", "a.mp4", "-o", "graded", "--camera", "camera.toml")
     assert "camera.toml, line 7" in sentence and "readout_mss" in sentence and "readout_ms" in sentence
-    Path("my.toml").write_text('[jello]\nclean_px1920 = "much"\n')
+    limits = default_limits_text().replace("clean_px1920 = 0.12", 'clean_px1920 = "much"')
+    Path("my.toml").write_text(limits)
+    line = limits[:limits.index('"much"')].count("\n") + 1
     sentence = wrong_use(capsys, "grade", "a.mp4", "-o", "graded", "--limits", "my.toml")
-    assert "my.toml" in sentence and "line 2" in sentence and "clean_px1920" in sentence
+    assert f"my.toml, line {line}:" in sentence and "clean_px1920" in sentence and "a number" in sentence
     Path("my.toml").write_text("[jello\n")
     assert "my.toml" in wrong_use(capsys, "grade", "a.mp4", "-o", "graded", "--limits", "my.toml")
 
@@ -152,8 +156,6 @@ def test_help_of_each_command_has_an_example_that_parses(command, capsys):
     lines = text.replace("\\\n", " ").splitlines()
     examples = [line.strip() for line in lines if line.strip().startswith(f"framegrade {command} ")]
     assert examples
-    import shlex
-
     for example in examples:
         words = shlex.split(example.split(" >")[0].split("   ")[0], comments=True)[2:]
         if words and "..." not in words and "[-h]" not in words:
@@ -173,8 +175,6 @@ def test_help_fits_80_columns_and_states_units_and_exit_statuses(capsys):
 
 
 def test_limits_can_be_copied_changed_and_used(shoot, capsys):
-    from framegrade.grading import load_limits
-
     assert cli.main(["limits"]) == 0
     text = capsys.readouterr().out
     assert text.count("#") >= 5 and "jello" in tomllib.loads(text)
@@ -359,6 +359,7 @@ import functools, sys
 sys.path.insert(0, {tests!r})
 import fake_take
 from framegrade import cli, pipeline
+from framegrade.grading import GRADES, default_limits_text, load_limits
 if __name__ == "__main__":
     pipeline.grade_all = functools.partial(pipeline.grade_all, measure=fake_take.measure, plot=fake_take.plot)
     sys.exit(cli.main(sys.argv[1:]))
@@ -408,6 +409,27 @@ def test_ctrl_c_is_130_and_keeps_what_is_graded(real, tmp_path):
                                     "again to go on.")
     assert "Traceback" not in err
     assert sorted(path.name for path in (tmp_path / "graded" / "clips").iterdir()) == ["a"]
+
+
+def test_real_clips_from_the_command_to_the_tables(tmp_path, monkeypatch, capsys):
+    """Nothing faked: encoded pictures, worker processes, the product's own measurement and plots."""
+    monkeypatch.chdir(tmp_path)
+    Path("card").mkdir()
+    media.write_clip(Path("card/pan.mp4"), media.moving_texture(40, 320, 180), rate=30)
+    Path("card/text.mp4").write_text("no video at all")
+    assert cli.main(["grade", "card", "-o", "graded", "--readout-ms", "10", "--hfov-deg", "80", "--json"]) == 1
+    result = json.loads(capsys.readouterr().out)
+    take, failed = result["takes"]
+    assert (take["clip"], take["mode"], take["readout_ms"]) == ("pan.mp4", "320x180@30", 10)
+    assert take["grade"] in GRADES and 0 <= take["score"] <= 100
+    assert not [note for note in take["notes"] if "plots" in note]
+    assert (failed["clip"], failed["status"]) == ("text.mp4", "failed")
+    record = tables.load_run(Path("graded")).record("pan.mp4")
+    assert len(record.motion) == 40
+    for name in tables.PLOT_FILES:
+        assert (Path("graded/clips/pan") / name).read_bytes().startswith(b"\x89PNG")
+    assert cli.main(["grade", "card/pan.mp4", "-o", "graded", "--readout-ms", "10", "--hfov-deg", "80"]) == 0
+    assert "unchanged" in capsys.readouterr().err
 
 
 def test_a_reader_that_has_seen_enough():

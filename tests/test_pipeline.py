@@ -716,10 +716,9 @@ def test_ctrl_c_leaves_the_tables_written(card, measured):
 # --------------------------------------------------------------------------------------------------- worker processes
 
 def test_a_crash_takes_one_clip_with_it(card, measured, tmp_path):
-    """Three ways to die and one that dies once, among clips that do nothing wrong; real processes, real signals."""
+    """Two ways to die and one that dies once, among clips that do nothing wrong; real processes, real signals."""
     card("segfault.mp4", signal=int(signal.SIGSEGV), padding="x" * 900)
     card("killed.mp4", signal=int(signal.SIGKILL), padding="x" * 800)
-    card("left.mp4", exit=3, padding="x" * 700)
     card("once.mp4", signal=int(signal.SIGKILL), once=tmp_path / "tried", padding="x" * 600)
     for number in range(4):
         card(f"good{number}.mp4", score=90 - number)
@@ -728,7 +727,6 @@ def test_a_crash_takes_one_clip_with_it(card, measured, tmp_path):
     assert run.failed == {
         "segfault.mp4": "the process that measured it crashed (Segmentation fault)",
         "killed.mp4": "the process that measured it was killed, most likely because the machine ran out of memory",
-        "left.mp4": "the process that measured it ended early (exit status 3)",
     }
     assert measured().count("segfault.mp4") == 2  # tried again, alone
     assert not list((card.out / "clips").glob(".partial*"))
@@ -813,6 +811,12 @@ def test_grade_one_clip_in_memory_or_with_files(card):
             framegrade.grade(bad, out=out, **fakes)
     with pytest.raises(FootageError, match="is a folder"):
         framegrade.grade(card.folder, out=card.out, **fakes)
+
+
+def test_a_lone_path_is_one_path(card):
+    run = framegrade.grade_all(str(card("a.mp4")), card.out, isolate=False, measure=fake_take.measure,
+                               plot=fake_take.plot)
+    assert run.graded == ("a.mp4",)
 
 
 def test_importing_the_package_is_light():
