@@ -24,9 +24,9 @@ from framegrade.rows import (
     ASSUMED_HFOV_DEG, RowSignals, band_mean, band_signals, cut, focal_length_px, remove_slow, slow_half_width,
 )
 from framegrade.spectrum.bands import band_power, third_octave_bands
-from framegrade.spectrum.folded import FoldedTone, find_folded_tones
+from framegrade.spectrum.folded import FoldedTone, find_folded_tones, fold
 from framegrade.spectrum.levels import Levels, measure_levels
-from framegrade.spectrum.response import Clock, exposure_clock, highest_frequency_hz
+from framegrade.spectrum.response import SLOWEST_ALIAS_HZ, Clock, exposure_clock, highest_frequency_hz
 from framegrade.spectrum.tones import LEAST_TONE_PX1920, Tone, axis_data, find_tones
 
 SHORTEST_CLIP_S = 1.0
@@ -211,7 +211,10 @@ def analyse(signals: RowSignals, optics: Optics, width_px: int) -> Vibration:
     highest = min(HIGHEST_HZ, highest_frequency_hz(clock, len(signals.height)))
     levels = tuple(measure_levels(signals, axis, clock, highest) for axis in range(3))
     tones = [t for axis in range(3) for t in _tones_of_axis(signals, axis, optics.readout_s, highest, per_1920)]
-    return Vibration(clock, levels, tuple(sorted(tones, key=lambda t: -t.amplitude_px)), ())
+    tones = tuple(sorted(tones, key=lambda t: -t.amplitude_px))
+    if optics.readout_s == 0:
+        return Vibration(clock, levels, (), tuple(fold(tone, clock.interval_s) for tone in tones))
+    return Vibration(clock, levels, tones, ())
 
 
 def _tones_of_axis(signals, axis, readout_s, highest, per_1920) -> list[Tone]:
@@ -273,9 +276,10 @@ class Jello:
 
 def _jello(info, optics, vibration, residual, signals) -> Jello:
     weights = screen.axis_weights(info.width_px, info.height_px)
-    if optics.readout_s is not None and any(level is not None for level in vibration.levels):
+    # a global shutter (readout 0) has no jello by construction: there the model-free figure shows what the floor is
+    if optics.readout_s and any(level is not None for level in vibration.levels):
         return _jello_from_levels(optics.readout_s, vibration.levels, weights, signals)
-    return _jello_model_free(residual, signals, weights)
+    return _jello_model_free(residual, signals, weights, optics.readout_s)
 
 
 def filled_density(levels: Levels, density: np.ndarray) -> np.ndarray:
@@ -312,7 +316,7 @@ def _jello_from_levels(readout_s, levels, weights, signals) -> Jello:
     return Jello(np.sqrt(total), np.sqrt(floor), times, np.sqrt(local))
 
 
-def _jello_model_free(residual, signals, weights) -> Jello:
+def _jello_model_free(residual, signals, weights, readout_s: float | None = None) -> Jello:
     """Without a readout: frame-difference residual over sqrt 2 (two frames' displacements, unrelated), noise taken off."""
     variance = signals.variance_px2
     typical = np.nanmedian(np.where(np.isfinite(variance), variance, np.nan), axis=(0, 1)) if np.isfinite(variance).any() else 1.0
@@ -324,6 +328,9 @@ def _jello_model_free(residual, signals, weights) -> Jello:
     ok = np.isfinite(square) & np.isfinite(noise)
     if not ok.any():
         return Jello(np.nan, np.nan, times, np.full(len(times), np.nan))
+    if readout_s == 0:
+        # rows exposed together cannot be displaced: all that is left is the floor itself
+        noise = square
     floor = float(np.sqrt(np.mean(noise[ok])))
     mean = float(np.sqrt(max(np.mean(square[ok]) - np.mean(noise[ok]), 0.0)))
     return Jello(mean, floor, times, np.sqrt(np.maximum(square - noise, 0)))
@@ -539,16 +546,27 @@ def _notes(info, optics, signals, cadence, vibration, jello, below_floor) -> lis
     if optics.readout_s is None:
         notes.append("readout time unknown: jello is model-free and tones have no frequency in hertz "
                      "(give --readout-ms or a camera file)")
-        for tone in vibration.folded[:2]:
-            if tone.candidates_hz:
-                shown = ", ".join(f"{f:.1f} Hz ({r * 1e3:.1f} ms)" for f, r in zip(tone.candidates_hz[:6], tone.candidate_readout_s[:6]))
-                notes.append(f"{AXES[tone.axis]} tone of {tone.amplitude_px:.2g} px, {abs(tone.cycles_per_frame):.2g} cycles per frame "
-                             f"height; candidate frequencies (with the readout each would need): {shown}")
+    elif optics.readout_s == 0:
+        notes.append("global shutter: vibration shows only folded below half the frame rate, so tones have candidate "
+                     "frequencies, not one, and the spectrum is the folded one")
+    elif vibration.clock is not None:
+        rate, slowest = vibration.clock.frame_rate_hz, SLOWEST_ALIAS_HZ
+        notes.append(f"blind within {slowest:g} Hz of {rate:.4g}, {2 * rate:.4g}, {3 * rate:.4g} Hz and so on (multiples of the "
+                     "frame rate): a vibration there does not show between frames")
+    notes += [_candidate_note(tone) for tone in vibration.folded[:2] if tone.candidates_hz]
     if optics.hfov_deg is None:
         notes.append(f"field of view unknown: angles are not stated, and amplitudes assume about {ASSUMED_HFOV_DEG:g} degrees")
     if below_floor:
         notes.append(f"jello is below the floor: at most {screen.to_px1920(jello.floor_px, info.width_px):.2g} px (1920-wide)")
     return notes
+
+
+def _candidate_note(tone: FoldedTone) -> str:
+    shown = ", ".join(f"{f:.1f} Hz" + (f" ({r * 1e3:.1f} ms)" if r else "")
+                      for f, r in zip(tone.candidates_hz[:8], tone.candidate_readout_s[:8]))
+    needed = " (with the readout each would need)" if any(tone.candidate_readout_s) else ""
+    return (f"{AXES[tone.axis]} tone of {tone.amplitude_px:.2g} px, {abs(tone.cycles_per_frame):.2g} cycles per frame height; "
+            f"candidate frequencies{needed}: {shown}")
 
 
 def _extra(info, optics, signals, cadence, vibration, jello) -> dict:

@@ -30,7 +30,7 @@ WORKING_WIDTH_PX = 1100
 COARSE_POINTS = 160
 MIN_POINTS = 12
 #: A residual above this many working pixels is outside the range where one linear solve holds.
-LINEAR_RANGE_PX = 0.05
+LINEAR_RANGE_PX = 0.6
 #: Bands the picture is cut into; 30 bands resolve 15 cycles per frame height.
 BANDS = 30
 COLUMNS = 16

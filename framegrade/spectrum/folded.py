@@ -13,7 +13,7 @@ import numpy as np
 
 from framegrade.rows import RowSignals
 from framegrade.spectrum.response import BLIND_GAIN, Clock, filter_gain
-from framegrade.spectrum.tones import AMPLITUDE_SYSTEMATIC, LEAST_TONE_PX1920, axis_data, detection_ratio
+from framegrade.spectrum.tones import AMPLITUDE_SYSTEMATIC, LEAST_TONE_PX1920, Tone, axis_data, detection_ratio
 
 MAX_FOLDED = 4
 CYCLE_STEP = 0.05
@@ -60,6 +60,15 @@ def candidates(alias_hz: float, cycles: float, interval_s: float) -> tuple[tuple
             found.append((abs(f), readout))
     found.sort()
     return tuple(f for f, _ in found), tuple(r for _, r in found)
+
+
+def fold(tone: Tone, interval_s: float, highest_hz: float = 500.0) -> FoldedTone:
+    """A global shutter's tone: only its alias is seen, so every `|alias + k / T|` up to `highest_hz` is a candidate."""
+    rate = 1 / interval_s
+    steps = np.arange(0, int(highest_hz / rate) + 1) * rate
+    found = sorted({float(f) for f in np.concatenate([steps + tone.frequency_hz, steps[1:] - tone.frequency_hz]) if f <= highest_hz})
+    return FoldedTone(tone.axis, tone.frequency_hz, 0.0, tone.amplitude_px, tone.amplitude_ci_px, tuple(found),
+                      (0.0,) * len(found))
 
 
 def find_folded_tones(signals: RowSignals, axis: int, clock: Clock, px_per_1920: float) -> list[FoldedTone]:

@@ -7,6 +7,7 @@ difference, and the temporal high-pass the data went through, are applied to eve
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -77,14 +78,22 @@ def difference_response(frequency_hz: float, clock: Clock) -> np.ndarray:
     return remove_slow(raw, None, clock.half_width) * np.sinc(frequency_hz * clock.band_s)
 
 
-def filter_gain(alias_hz: np.ndarray, clock: Clock) -> np.ndarray:
-    """Amplitude gain of the temporal high-pass at frequencies as sampled by the frames; shape as `alias_hz`."""
+@lru_cache(maxsize=32)
+def _filter_table(half_width: int, cells: int = 2048) -> np.ndarray:
+    """Gain of the high-pass over one turn of the sampling circle, `cells + 1` even points from 0 to the frame rate."""
     # the impulse's own response, mid-record: away from the ends the filter is the same everywhere
-    long = np.zeros(6 * clock.half_width + 1)
-    long[3 * clock.half_width] = 1.0
-    impulse = remove_slow(long, None, clock.half_width)
-    lag = (np.arange(len(long)) - 3 * clock.half_width) * clock.interval_s
-    return np.abs(np.exp(-2j * np.pi * np.multiply.outer(alias_hz, lag)) @ impulse)
+    impulse = np.zeros(6 * half_width + 1)
+    impulse[3 * half_width] = 1.0
+    response = remove_slow(impulse, None, half_width)
+    gain = np.abs(np.fft.fft(response, max(cells, len(response))))
+    return np.interp(np.linspace(0, 1, cells + 1), np.linspace(0, 1, len(gain) + 1), np.append(gain, gain[0]))
+
+
+def filter_gain(frequency_hz: np.ndarray, clock: Clock) -> np.ndarray:
+    """Amplitude gain of the temporal high-pass, which sees a frequency by its alias; shape as `frequency_hz`."""
+    table = _filter_table(clock.half_width)
+    turn = np.mod(np.asarray(frequency_hz, float) * clock.interval_s, 1.0)
+    return np.interp(turn, np.linspace(0, 1, len(table)), table)
 
 
 def difference_gain(frequency_hz: np.ndarray, clock: Clock) -> np.ndarray:
