@@ -3,9 +3,9 @@
 The frame-to-frame motion is summed to a path and split by frequency: below 0.5 Hz is travel (intended), 0.5 to 3 Hz is
 sway, above 3 Hz is shake, as a viewer of the frames sees it.
 
-The split is a regression on slow functions of time (Savitzky and Golay 1964 fit polynomials locally; here a whole-record
-basis, Huang and others' detrending apart, is not needed: zero-phase Butterworth sections, Gustafsson 1996, "Determining
-the initial states in forward-backward filtering", IEEE Trans. Signal Process. 44(4), keep the ends honest).
+The split is by zero-phase Butterworth sections over the whole record (Gustafsson 1996, "Determining the initial states in
+forward-backward filtering", IEEE Trans. Signal Process. 44(4)). A steady pan is travel whatever its speed, so the straight
+line through the path is taken off before the filters: their ends would turn part of it into sway.
 """
 
 from __future__ import annotations
@@ -28,7 +28,7 @@ class Path:
     ----------
     time_s : ndarray, shape (frames,)
     travel_px, sway_px, shake_px : ndarray, shape (frames, 3)
-        Yaw, pitch, roll parts, native pixels (roll at mid-edge). NaN where the record is too short to tell.
+        Yaw, pitch, roll parts, native pixels (roll at mid-edge). NaN for an axis that was never measured.
     speed_px_per_s : ndarray, shape (frames, 3)
         Speed of the whole picture.
     """
@@ -65,14 +65,16 @@ def split_path(time_s: np.ndarray, step_px: np.ndarray) -> Path:
     speed = steps / interval[:, None]
     for axis in range(3):
         good = np.isfinite(speed[:, axis])
-        speed[:, axis] = np.interp(index, index[good], speed[good, axis]) if good.any() else 0.0
+        speed[:, axis] = np.interp(index, index[good], speed[good, axis]) if good.any() else np.nan
     position = np.vstack([np.zeros(3), np.cumsum(speed * interval[:, None], axis=0)])
     # even samples for the filters; a variable frame rate is resampled, its own times are put back after
     rate = 1 / np.median(interval)
     even = np.arange(time_s[0], time_s[-1] + 0.5 / rate, 1 / rate)
     regular = np.stack([np.interp(even, time_s, position[:, axis]) for axis in range(3)], 1)
-    slow = _low_pass(regular, TRAVEL_BELOW_HZ, rate)
-    middle = _low_pass(regular, SHAKE_ABOVE_HZ, rate)
+    centred = np.arange(len(regular)) - (len(regular) - 1) / 2
+    pan = regular.mean(0) + np.outer(centred, centred @ regular / (centred @ centred))
+    slow = pan + _low_pass(regular - pan, TRAVEL_BELOW_HZ, rate)
+    middle = pan + _low_pass(regular - pan, SHAKE_ABOVE_HZ, rate)
 
     def back(series: np.ndarray) -> np.ndarray:
         return np.stack([np.interp(time_s, even, series[:, axis]) for axis in range(3)], 1)
