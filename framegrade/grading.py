@@ -20,6 +20,8 @@ STEADIABLE = ("sway", "shake")
 UNITS = {"sway": "px1920", "shake": "px1920", "jello": "px1920", "smear": "px1920", "cadence": "pct"}
 KEEP, STABILISE, RESHOOT = "keep", "stabilise", "reshoot"
 GRADES = (KEEP, STABILISE, RESHOOT)
+#: Rounding of window times must not decide a grade.
+ROUNDING_S = 1e-6
 
 
 @dataclass(frozen=True)
@@ -139,7 +141,7 @@ _PHRASE = {
     "sway": "sways slowly by {figure} px (rms, 1920-wide, 0.5 to 3 Hz)",
     "shake": "shakes by {figure} px (rms, 1920-wide, above 3 Hz)",
     "jello": "jello of {figure} px (rms, 1920-wide): rows displaced against each other",
-    "smear": "smeared by {figure} px during the exposure (1920-wide)",
+    "smear": "smear of {figure} px during the exposure (1920-wide)",
     "cadence": "{figure} % of frames repeated or dropped",
 }
 
@@ -169,7 +171,7 @@ def usable_ranges(start_s: np.ndarray, end_s: np.ndarray, score: np.ndarray, lim
     whole = end_s[-1] - start_s[0] if len(start_s) else 0.0
     for first, last in zip(edges[::2], edges[1::2]):
         length = end_s[last - 1] - start_s[first]
-        if length >= min(limits.shortest_s, whole) - 1e-6:
+        if length >= min(limits.shortest_s, whole) - ROUNDING_S:
             ranges.append(Range(float(start_s[first]), float(end_s[last - 1]), float(np.mean(score[first:last]))))
     return ranges
 
@@ -199,11 +201,11 @@ def grade_take(figures: dict[str, float], crop_needed_pct: float, measured_pct: 
         One sentence with a figure.
     """
     if not measured_pct >= limits.least_measured_pct:
-        return None, np.nan, (f"cannot be judged: only {_figure(measured_pct)} % of the picture could be measured "
+        return None, np.nan, (f"cannot be judged: only {_share(measured_pct)} of the picture could be measured "
                               f"(needs {limits.least_measured_pct:g} %)")
     verdict = judge(figures, limits)
     if verdict.component is None:
-        return None, np.nan, "cannot be judged: no component could be measured"
+        return None, np.nan, f"cannot be judged: no component could be measured in {_share(measured_pct)} of the picture"
     finding = phrase(verdict.component, verdict.figure)
     if verdict.score >= limits.usable_score:
         lead = "clean" if verdict.score >= 100 else "usable"
@@ -211,20 +213,20 @@ def grade_take(figures: dict[str, float], crop_needed_pct: float, measured_pct: 
             else f"{lead}: the worst is {finding}"
     longest = max((r.out_s - r.in_s for r in ranges), default=0.0)
     usable = sum(r.out_s - r.in_s for r in ranges)
-    if longest >= limits.keep_s:
+    if longest >= limits.keep_s - ROUNDING_S:
         return KEEP, verdict.score, f"usable for {usable:.1f} of {duration_s:.1f} s; elsewhere {finding}"
     others = {name: figures.get(name, np.nan) for name in COMPONENTS if name not in STEADIABLE}
     lasting = judge(others, limits)
     lasting_ok = lasting.component is None or lasting.score >= limits.usable_score
     if verdict.component in STEADIABLE and lasting_ok:
         if crop_needed_pct <= limits.crop_pct:
-            return STABILISE, verdict.score, f"{finding}; steadying costs {_figure(crop_needed_pct)} % of the picture"
-        return RESHOOT, verdict.score, (f"{finding}; steadying would cost {_figure(crop_needed_pct)} % of the picture "
+            return STABILISE, verdict.score, f"{finding}; steadying costs {_share(crop_needed_pct)} of the picture"
+        return RESHOOT, verdict.score, (f"{finding}; steadying would cost {_share(crop_needed_pct)} of the picture "
                                         f"(limit {limits.crop_pct:g} %)")
     if verdict.component in STEADIABLE:
         return RESHOOT, verdict.score, f"{finding}, and {phrase(lasting.component, lasting.figure)} stays after steadying"
     return RESHOOT, verdict.score, f"{finding}; steadying does not cure it"
 
 
-def _figure(value: float) -> str:
-    return "an unknown share" if not np.isfinite(value) else f"{value:.3g}"
+def _share(value_pct: float) -> str:
+    return f"{value_pct:.3g} %" if np.isfinite(value_pct) else "an unknown share"
