@@ -50,7 +50,8 @@ def find_cadence_faults(time_s: np.ndarray, next_time_s: np.ndarray, change_leve
     """
     interval = next_time_s - time_s
     typical = np.median(interval)
-    local = median_filter(change_level, min(NEIGHBOURS, len(change_level)) | 1, mode="nearest")
+    # mirrored at the ends: a repeat as the very last pair must not be its own neighbourhood
+    local = median_filter(change_level, min(NEIGHBOURS, len(change_level)) | 1, mode="mirror")
     repeated = (local > LEAST_CHANGE_LEVEL) & (change_level < REPEAT_SHARE * local)
     gap = interval > GAP_INTERVALS * typical
     dropped = gap | _long_steps(step_px / interval[:, None] * typical, repeated)
