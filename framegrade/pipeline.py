@@ -836,13 +836,17 @@ class _Worker:
 
     def cause_of_death(self) -> str:
         self.process.join()
-        code = self.process.exitcode or 0
-        if code == -getattr(signal, "SIGKILL", 9):
-            return "the process that measured it was killed, most likely because the machine ran out of memory"
-        if code < 0:
-            with contextlib.suppress(ValueError):
-                return f"the process that measured it crashed ({signal.strsignal(-code) or signal.Signals(-code).name})"
-        return f"the process that measured it ended early (exit status {code})"
+        return _cause_of_death(self.process.exitcode)
+
+
+def _cause_of_death(exit_code: int | None) -> str:
+    """Why a worker ended, from its exit status: the negative number of a signal, or what it exited with itself."""
+    code = exit_code or 0
+    if code == -9:
+        return "the process that measured it was killed, most likely because the machine ran out of memory"
+    if code < 0:
+        return f"the process that measured it crashed ({signal.strsignal(-code) or f'signal {-code}'})"
+    return f"the process that measured it ended early (exit status {code})"
 
 
 @contextlib.contextmanager
