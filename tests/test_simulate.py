@@ -11,6 +11,8 @@ import json
 import math
 import subprocess
 import sys
+import tomllib
+from pathlib import Path
 
 import av
 import cv2
@@ -547,6 +549,45 @@ def test_row_signals_are_the_exposure_average_on_the_row_clock():
     assert np.all(angle[..., 1:] == 0)
 
 
+# The small shoot ---------------------------------------------------------------------------------------------------
+
+
+FIXTURES = Path(__file__).parent.parent / "fixtures"
+RECIPES = sorted((FIXTURES / "recipes").glob("*.toml"))
+
+
+@pytest.mark.parametrize("recipe", RECIPES, ids=[path.stem for path in RECIPES])
+def test_shoot_is_what_its_recipes_render(recipe):
+    clip = FIXTURES / "clips" / (recipe.stem + ".mp4")
+    stored, fresh = load_truth(clip), truth_of(load_flight(recipe))
+    assert stored.facts == json.loads(json.dumps(fresh.facts))
+    assert stored.seen_rad == pytest.approx(fresh.seen_rad, abs=1e-7)
+    with av.open(str(clip)) as container:
+        stream = container.streams.video[0]
+        times = sorted(float(packet.pts * packet.time_base) for packet in container.demux(stream) if packet.size)
+        size = (stream.codec_context.width, stream.codec_context.height)
+    assert times == pytest.approx(stored.pts_s, abs=1e-9)
+    camera = stored.facts["camera"]
+    assert size == (camera["width_px"], camera["height_px"])
+    modes = tomllib.loads((FIXTURES / "camera.toml").read_text(encoding="utf-8"))["mode"]
+    own = [mode for mode in modes if all(mode[key] == camera[key] for key in mode)]
+    assert len(own) == 1
+
+
+def test_shoot_stays_small_and_holds_a_before_and_an_after():
+    assert 8 <= len(RECIPES) <= 12
+    assert sum(path.stat().st_size for path in FIXTURES.rglob("*") if path.is_file()) < 15e6
+    before, after = (truth_of(load_flight(FIXTURES / "recipes" / name))
+                     for name in ("08-mount-rigid.toml", "09-mount-isolated.toml"))
+    for first, second in zip(before.facts["tones"], after.facts["tones"]):
+        gain = 20 * math.log10(second["amplitude_px"] / first["amplitude_px"])
+        # Harris' Shock and Vibration Handbook, ch. 30, at 36 Hz and z = 0.2.
+        r = first["frequency_hz"] / 36.0
+        formula = 10 * math.log10((1 + (0.4 * r) ** 2) / ((1 - r**2) ** 2 + (0.4 * r) ** 2))
+        assert gain == pytest.approx(formula, abs=1e-9)
+        assert gain < -10
+
+
 # Recipes and the command ---------------------------------------------------------------------------------------
 
 
@@ -648,7 +689,5 @@ def test_command_refuses_wrong_use_with_status_two(tmp_path, capsys):
 def test_example_in_the_help_can_be_flown():
     lines = [line for line in command.EXAMPLE.splitlines() if line.startswith("  ")]
     text = "\n".join(line.strip() for line in lines if "framegrade simulate" not in line)
-    import tomllib
-
     flight = flight_from_dict(tomllib.loads(text))
     assert flight.tone[0].frequency_hz == 137.3

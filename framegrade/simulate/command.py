@@ -52,8 +52,8 @@ examples:
   framegrade simulate recipes/ -o clips      every recipe of a folder
   framegrade simulate recipes/ --check       only say whether they can be flown
 
-Writes NAME.mp4 (.mov for mjpeg and prores), NAME.truth.json (figures) and NAME.truth.npz (angles of 64 rows of every
-frame). Exit status: 0 all rendered, 1 some failed, 2 wrong use.
+Writes NAME.mp4 (.mov for mjpeg and prores), NAME.truth.json (figures) and NAME.truth.npz (angles of 16 to 64
+rows of every frame). Exit status: 0 all rendered, 1 some failed, 2 wrong use.
 """
 
 

@@ -11,10 +11,11 @@ from typing import Any
 import numpy as np
 
 from .clock import Schedule, row_heights, row_times, schedule
-from .motion import broadband_lines, exposure_average, exposure_factor, pose, position, seen_tones
+from .motion import broadband_lines, exposure_average, exposure_factor, motion_of, pose, position, seen_tones
 from .recipe import Flight
 
-_ROWS = 64
+_FEWEST_ROWS, _MOST_ROWS = 16, 64
+_ROWS_PER_CYCLE = 8
 
 
 @dataclass(frozen=True)
@@ -185,6 +186,13 @@ def _facts(flight: Flight, frames: Schedule) -> dict[str, Any]:
     }
 
 
+def _rows_kept(flight: Flight) -> int:
+    """Rows whose angles are kept: eight for a cycle of the fastest vibration, a power of two from 16 to 64."""
+    cycles = motion_of(flight).highest_hz * flight.camera.readout_s
+    wanted = 2 ** math.ceil(math.log2(max(_ROWS_PER_CYCLE * cycles, 1.0)))
+    return min(max(_FEWEST_ROWS, wanted), _MOST_ROWS, flight.camera.height_px)
+
+
 def truth_of(flight: Flight, frames: Schedule | None = None) -> Truth:
     """The truth of a flight, without rendering it.
 
@@ -200,7 +208,7 @@ def truth_of(flight: Flight, frames: Schedule | None = None) -> Truth:
     """
     frames = frames or schedule(flight)
     camera = flight.camera
-    heights = row_heights(min(_ROWS, camera.height_px))
+    heights = row_heights(_rows_kept(flight))
     times = row_times(frames.exposed_s, heights, camera.readout_s)
     return Truth(
         pts_s=frames.pts_s, exposed_s=frames.exposed_s, heights=heights,
