@@ -671,7 +671,27 @@ def test_command_renders_folders_and_says_what_failed(tmp_path, capsys):
     assert "a.toml: can be flown" in capsys.readouterr().out
 
 
+def test_keys_lists_what_a_recipe_may_hold_with_its_range(capsys):
+    assert run_command("--keys") == 0
+    text = capsys.readouterr().out
+    assert '[[tone]]\n  axis = "yaw"' in text and "[isolator]" in text
+    line = next(line for line in text.splitlines() if line.strip().startswith("hfov_deg"))
+    assert line.split() == "hfov_deg = 80.0 horizontal field of view; 1 to 150 degrees".split()
+    # A key the list names is a key the reader knows: an unknown one would be refused by name.
+    table = None
+    for line in text.splitlines():
+        if line.startswith("["):
+            table = line.strip("[]")
+        elif line.startswith("  ") and table:
+            with pytest.raises(FlightError) as caught:
+                value = {line.split()[0]: {"not": "a value"}}
+                flight_from_dict({table: value if f"[{table}]" in text and f"[[{table}]]" not in text else [value]})
+            assert "is not known" not in str(caught.value) and line.split()[0] in str(caught.value)
+
+
 def test_command_refuses_wrong_use_with_status_two(tmp_path, capsys):
+    assert run_command("-o", tmp_path) == 2
+    assert "name at least one recipe" in capsys.readouterr().err
     assert run_command(tmp_path / "a.toml") == 2
     assert "-o OUT_DIR" in capsys.readouterr().err
     assert run_command(tmp_path, "-o", tmp_path / "out") == 2

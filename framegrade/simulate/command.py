@@ -9,7 +9,7 @@ from rich.console import Console
 from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
 
 from .encode import SUFFIX
-from .recipe import Flight, FlightError, load_flight
+from .recipe import Flight, FlightError, describe_keys, load_flight
 from .rendering import render
 
 DESCRIPTION = """\
@@ -45,7 +45,7 @@ A recipe is a small TOML file. This one flies forward over soil while a rotor sh
   amplitude_px = 0.45        # peak, or amplitude_deg
 
 Further tables: [[motors]], [[broadband]], [isolator], [[pan]], [[drift]], [[cadence]], [lamp], [scene], [[panel]],
-[[cars]], [noise], [encode]. A wrong key is answered with the allowed ones.
+[[cars]], [noise], [encode]; --keys lists all their keys. A wrong key is answered with the allowed ones.
 
 examples:
   framegrade simulate hover.toml -o clips
@@ -68,9 +68,10 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
     parser.description = DESCRIPTION
     parser.epilog = EXAMPLE
     parser.formatter_class = argparse.RawDescriptionHelpFormatter
-    parser.add_argument("recipes", nargs="+", type=Path, metavar="FLIGHT.toml", help="recipes, or folders of them")
+    parser.add_argument("recipes", nargs="*", type=Path, metavar="FLIGHT.toml", help="recipes, or folders of them")
     parser.add_argument("-o", "--out", type=Path, metavar="OUT_DIR", help="folder for clips and truth; made if missing")
     parser.add_argument("--check", action="store_true", help="read the recipes and render nothing")
+    parser.add_argument("--keys", action="store_true", help="list every table and key of a recipe with its range")
     parser.add_argument("--quiet", action="store_true", help="no progress bar; errors are still shown")
 
 
@@ -124,7 +125,12 @@ def run(args: argparse.Namespace) -> int:
     """
     errors = Console(stderr=True, highlight=False, soft_wrap=True)
     screen = Console(highlight=False, soft_wrap=True, quiet=args.quiet)
+    if args.keys:
+        screen.print(describe_keys(), markup=False, end="")
+        return 0
     try:
+        if not args.recipes:
+            raise FlightError("simulate: name at least one recipe (FLIGHT.toml) or a folder of them.")
         if args.out is None and not args.check:
             raise FlightError("simulate: name a folder for the clips with -o OUT_DIR.")
         recipes = recipe_files(args.recipes)

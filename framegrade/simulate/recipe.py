@@ -348,6 +348,26 @@ _REPEATED = {
 }
 
 
+def describe_keys() -> str:
+    """Every table and key of a recipe with its default, range and meaning, as plain text from the definitions."""
+    lines = ["seed = 0           whole number; the same seed gives the same pictures", 'title = ""         free text']
+    for name, kind in (_SINGLE | _REPEATED).items():
+        lines += ["", f"[[{name}]]" if name in _REPEATED else f"[{name}]"]
+        for entry in dataclasses.fields(kind):
+            meta, default = entry.metadata, entry.default
+            if meta["kind"] == "choice":
+                allowed = " | ".join(meta["choices"])
+            elif "low" in meta and meta["kind"] != "rate":
+                allowed = _range_text(meta)
+            else:
+                allowed = ""
+            quoted = f'"{default}"' if isinstance(default, str) else str(default)
+            shown = "" if default is None or default == () else f" = {quoted}"
+            text = "; ".join(part for part in (meta["text"], allowed) if part)
+            lines.append(f"  {entry.name + shown:<30} {text}")
+    return "\n".join(lines) + "\n"
+
+
 class _Where:
     """Names a place of the recipe in an error: file, line and key."""
 
