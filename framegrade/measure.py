@@ -9,6 +9,7 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
 from pathlib import Path
 
+import cv2
 import numpy as np
 import pandas as pd
 
@@ -25,7 +26,7 @@ from framegrade.rows import (
 )
 from framegrade.spectrum.bands import band_power, third_octave_bands
 from framegrade.spectrum.folded import FoldedTone, find_folded_tones, fold
-from framegrade.spectrum.levels import Levels, measure_levels
+from framegrade.spectrum.levels import FittedTone, Levels, add_tones, bridged, measure_levels
 from framegrade.spectrum.response import SLOWEST_ALIAS_HZ, Clock, exposure_clock, highest_frequency_hz
 from framegrade.spectrum.tones import LEAST_TONE_PX1920, Tone, axis_data, find_tones
 
@@ -37,6 +38,7 @@ STRETCH_S = 8.0
 #: A frame with less of its picture measured than this says nothing about the path.
 LEAST_FRAME_SHARE = 0.03
 LOW_BITS_PER_PIXEL = 0.03
+LEAST_BAND_SEEN = 0.25
 
 
 @dataclass(frozen=True)
@@ -126,6 +128,8 @@ def measure_clip(path: Path, settings: MeasureSettings | None = None,
         If the clip cannot be read, or is too short or too small to measure; one sentence.
     """
     settings = settings or MeasureSettings()
+    if settings.threads:
+        cv2.setNumThreads(settings.threads)
     limits = settings.limits or grading.load_limits(None)
     info = probe(path)
     optics = resolve_optics(info, settings)
@@ -209,26 +213,39 @@ def analyse(signals: RowSignals, optics: Optics, width_px: int) -> Vibration:
         return Vibration(None, (None, None, None), (), tuple(sorted(folded, key=lambda t: -t.amplitude_px)))
     clock = exposure_clock(signals, optics.readout_s)
     highest = min(HIGHEST_HZ, highest_frequency_hz(clock, len(signals.height)))
-    levels = tuple(measure_levels(signals, axis, clock, highest) for axis in range(3))
-    tones = [t for axis in range(3) for t in _tones_of_axis(signals, axis, optics.readout_s, highest, per_1920)]
+    tones: list[Tone] = []
+    levels: list[Levels | None] = []
+    for axis in range(3):
+        found, fitted, rest = _tones_of_axis(signals, axis, optics.readout_s, highest, per_1920)
+        tones += found
+        level = measure_levels(rest, axis, clock, highest)
+        levels.append(add_tones(level, fitted, signals.next_time_s[-1] - signals.time_s[0]) if level is not None else None)
     tones = tuple(sorted(tones, key=lambda t: -t.amplitude_px))
     if optics.readout_s == 0:
-        return Vibration(clock, levels, (), tuple(fold(tone, clock.interval_s) for tone in tones))
-    return Vibration(clock, levels, tones, ())
+        return Vibration(clock, tuple(levels), (), tuple(fold(tone, clock.interval_s) for tone in tones))
+    return Vibration(clock, tuple(levels), tones, ())
 
 
-def _tones_of_axis(signals, axis, readout_s, highest, per_1920) -> list[Tone]:
+def _tones_of_axis(signals, axis, readout_s, highest, per_1920) -> tuple[list[Tone], list[FittedTone], RowSignals]:
+    """Tones of one axis over the take, the same as fitted stretch by stretch, and the signals without them."""
     span = signals.next_time_s[-1] - signals.time_s[0]
     count = max(1, int(round(span / STRETCH_S)))
     edges = np.linspace(0, signals.pairs, count + 1).astype(int)
     found: list[Tone] = []
+    fitted: list[FittedTone] = []
+    rest = signals.fast_px.copy()
     for first, last in zip(edges[:-1], edges[1:]):
         part = cut(signals, first, last)
         clock = exposure_clock(part, readout_s)
         data = axis_data(part, axis, clock)
-        if data is not None:
-            found += find_tones(data, axis, highest, per_1920)[0]
-    return join_tones(found, count, LEAST_TONE_PX1920 * per_1920)
+        if data is None:
+            continue
+        tones, residual = find_tones(data, axis, highest, per_1920)
+        found += tones
+        fitted += [FittedTone(tone.lines, float(part.time_s[0]), float(part.next_time_s[-1])) for tone in tones]
+        if tones:
+            rest[first:last, :, axis] = np.where(data.weight > 0, residual, part.fast_px[..., axis])
+    return join_tones(found, count, LEAST_TONE_PX1920 * per_1920), fitted, replace(signals, fast_px=rest)
 
 
 def join_tones(found: list[Tone], stretches: int, least_px: float) -> list[Tone]:
@@ -282,23 +299,6 @@ def _jello(info, optics, vibration, residual, signals) -> Jello:
     return _jello_model_free(residual, signals, weights, optics.readout_s)
 
 
-def filled_density(levels: Levels, density: np.ndarray) -> np.ndarray:
-    """Density with its blind intervals bridged by the running median of what was seen around them (never by a tone)."""
-    from scipy.ndimage import generic_filter
-
-    step = levels.frequency_hz[1] - levels.frequency_hz[0]
-    size = max(5, int(20.0 / step) | 1)
-    blind = ~levels.observable
-    if not blind.any() or not levels.observable.any():
-        return np.nan_to_num(density)
-    padded = np.pad(np.where(levels.observable, density, np.nan), size // 2, constant_values=np.nan)
-    out = np.array(density, float)
-    for k in np.flatnonzero(blind):
-        around = padded[k:k + size]
-        out[k] = np.nanmedian(around) if np.isfinite(around).any() else 0.0
-    return np.nan_to_num(out)
-
-
 def _jello_from_levels(readout_s, levels, weights, signals) -> Jello:
     known = [level for level in levels if level is not None]
     times = known[0].window_s
@@ -308,7 +308,7 @@ def _jello_from_levels(readout_s, levels, weights, signals) -> Jello:
             continue
         f = level.frequency_hz
         share = screen.jello_share(f, readout_s) * (f >= SHAKE_ABOVE_HZ) * (f[1] - f[0]) * weights[axis]
-        power = float(np.sum(filled_density(level, level.density) * share))
+        power = float(np.sum(bridged(level) * share))
         seen = float(np.nansum(level.density * share))
         total += power
         floor += float(np.nansum(level.floor * share))
@@ -427,16 +427,22 @@ def tone_table(clip: str, info: ClipInfo, optics: Optics, vibration: Vibration) 
 
 
 def spectrum_table(clip: str, info: ClipInfo, optics: Optics, vibration: Vibration) -> pd.DataFrame:
-    """Rows of spectrum.csv: one-third-octave levels; a level below the floor is empty, the floor is its limit."""
+    """Rows of spectrum.csv: one-third-octave levels; a level below the floor is empty, the floor is its limit.
+
+    Blind parts of a band are taken to hold what lies around them (tones apart); a band seen to less than a quarter has no
+    level.
+    """
     rows = []
     for axis, level in enumerate(vibration.levels):
         if level is None:
             continue
         step = level.frequency_hz[1] - level.frequency_hz[0]
+        whole, bridged_floor, everywhere = bridged(level), bridged(level, level.floor), np.ones(len(level.density), bool)
         for band in third_octave_bands(level.frequency_hz[-1] + step / 2):
-            power, seen = band_power(level.frequency_hz, level.density, level.observable, band)
-            floor, _ = band_power(level.frequency_hz, level.floor, level.observable, band)
-            level_px = np.sqrt(power) if np.isfinite(power) and power > floor else np.nan
+            _, seen = band_power(level.frequency_hz, level.density, level.observable, band)
+            power, _ = band_power(level.frequency_hz, whole, everywhere, band)
+            floor, _ = band_power(level.frequency_hz, bridged_floor, everywhere, band)
+            level_px = np.sqrt(power) if seen >= LEAST_BAND_SEEN and power > floor else np.nan
             mdeg = _mdeg(level_px, axis, info, optics) if np.isfinite(level_px) else np.nan
             rows.append((clip, AXES[axis], band.nominal_hz, band.low_hz, band.high_hz, level_px, mdeg,
                          np.sqrt(floor) if np.isfinite(floor) else np.nan, 100 * seen))
@@ -462,7 +468,7 @@ def vibration_mdeg(info: ClipInfo, optics: Optics, vibration: Vibration) -> floa
         if level is None:
             continue
         f = level.frequency_hz
-        power = np.sum(filled_density(level, level.density) * (f >= SHAKE_ABOVE_HZ)) * (f[1] - f[0])
+        power = np.sum(bridged(level) * (f >= SHAKE_ABOVE_HZ)) * (f[1] - f[0])
         total += _mdeg(np.sqrt(power), axis, info, optics) ** 2
     return float(np.sqrt(total))
 

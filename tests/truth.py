@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 from pathlib import Path
 
 import numpy as np
@@ -37,7 +38,7 @@ def flight(width_px: int, height_px: int, rate: float, readout_ms: float, *, see
     return recipe
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Rendered:
     """A recipe's truth as rendered."""
 
@@ -92,11 +93,12 @@ def true_figures(rendered: Rendered) -> dict[str, float]:
             "vibration_mdeg": float(np.sqrt((mdeg.std(0) ** 2).sum()))}
 
 
-def dense_motion(rendered: Rendered, step_s: float = 2.5e-4) -> tuple[np.ndarray, np.ndarray]:
+@lru_cache(maxsize=8)
+def dense_motion(rendered: Rendered, step_s: float = 1e-3) -> tuple[np.ndarray, np.ndarray]:
     """True camera rotation at even times, averaged over the exposure; times and (T, 3) native pixels."""
     truth = rendered.truth
     exposure = truth.facts["camera"]["exposure_ms"] * 1e-3
     time = np.arange(truth.pts_s[0], truth.pts_s[-1], step_s)
-    offsets = (np.arange(8) + 0.5) / 8 * exposure - exposure / 2
+    offsets = (np.arange(4) + 0.5) / 4 * exposure - exposure / 2
     angles = np.mean([pose(rendered.flight, time + offset) for offset in offsets], axis=0)
     return time, angles * pixel_scale(truth)

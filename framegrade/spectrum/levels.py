@@ -21,11 +21,13 @@ import numpy as np
 
 from framegrade.rows import RowSignals
 from framegrade.spectrum.response import Clock, difference_gain, observable
+from framegrade.spectrum.tones import Line
 
 WINDOW_S = 1.0
 HOP_S = 0.5
 MM_TURNS = 40
 MIN_BANDS = 4
+BRIDGE_HZ = 10.0
 
 
 @dataclass(frozen=True)
@@ -54,6 +56,63 @@ class Levels:
     observable: np.ndarray
     window_s: np.ndarray
     local: np.ndarray
+
+
+@dataclass(frozen=True)
+class FittedTone:
+    """Lines of a fitted tone and the stretch of time they hold for, seconds."""
+
+    lines: tuple[Line, ...]
+    start_s: float
+    stop_s: float
+
+
+def add_tones(levels: Levels, tones: list[FittedTone], duration_s: float) -> Levels:
+    """Put the power of fitted tones, which were taken off the signals before, back where it belongs.
+
+    A tone's power is exact where the windowed spectrum would smear it, above all beside a blind interval.
+    """
+    step = levels.frequency_hz[1] - levels.frequency_hz[0]
+    density, local, seen = levels.density.copy(), levels.local.copy(), levels.observable.copy()
+    half = WINDOW_S / 2
+    offsets = np.linspace(-half, half, 65)
+    taper = np.hanning(len(offsets)) ** 2
+    for tone in tones:
+        frequency = np.array([line.frequency_hz for line in tone.lines])
+        coefficient = np.array([line.coefficient for line in tone.lines])
+        cell = np.clip(np.round(frequency / step).astype(int) - 1, 0, len(density) - 1)
+        share = np.abs(coefficient) ** 2 / np.sum(np.abs(coefficient) ** 2)
+        total = 0.5 * np.mean(_envelope(frequency, coefficient, np.linspace(tone.start_s, tone.stop_s, 401)) ** 2)
+        density[cell] = np.nan_to_num(density[cell])
+        np.add.at(density, cell, share * total * (tone.stop_s - tone.start_s) / duration_s / step)
+        seen[cell] = True
+        local[:, cell] = np.nan_to_num(local[:, cell])
+        for w, middle in enumerate(levels.window_s):
+            if tone.start_s <= middle < tone.stop_s:
+                power = 0.5 * np.average(_envelope(frequency, coefficient, middle + offsets) ** 2, weights=taper)
+                np.add.at(local[w], cell, share * power / step)
+    return Levels(levels.frequency_hz, density, levels.floor, seen, levels.window_s, local)
+
+
+def bridged(levels: Levels, density: np.ndarray | None = None) -> np.ndarray:
+    """Density with its blind intervals bridged by the running median of what was seen around them (never by a tone)."""
+    density = levels.density if density is None else density
+    known = levels.observable & np.isfinite(density)
+    out = np.where(known, density, 0.0)
+    if not known.any():
+        return out
+    step = levels.frequency_hz[1] - levels.frequency_hz[0]
+    reach = max(2, int(BRIDGE_HZ / step))
+    padded = np.pad(np.where(known, density, np.nan), reach, constant_values=np.nan)
+    for k in np.flatnonzero(~known):
+        around = padded[k:k + 2 * reach + 1]
+        out[k] = np.nanmedian(around) if np.isfinite(around).any() else 0.0
+    return out
+
+
+def _envelope(frequency: np.ndarray, coefficient: np.ndarray, time_s: np.ndarray) -> np.ndarray:
+    middle = frequency.mean()
+    return np.abs(np.exp(2j * np.pi * (np.outer(time_s, frequency - middle))) @ coefficient)
 
 
 def _filled(values: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

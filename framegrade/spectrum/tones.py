@@ -31,8 +31,15 @@ FALSE_ALARM = 0.01
 LEAST_TONE_PX1920 = 0.03
 MAX_TONES = 12
 LOWEST_TONE_HZ = 4.0
-#: Systematic part of an amplitude's interval (95 %, relative), from the simulated campaign in tests/bench.
+#: Systematic parts of an amplitude's interval (95 %), from the campaign in tests/bench: relative, and in native pixels
+#: (coding swallows a little of the smallest motion).
 AMPLITUDE_SYSTEMATIC = 0.04
+AMPLITUDE_SYSTEMATIC_PX = 0.008
+#: The Cramer-Rao bound assumes white noise; errors of the flow follow the motion itself. The campaign's scatter is this
+#: many times the bound.
+BOUND_FACTOR = 2.0
+#: Lines tried one by one before a neighbourhood is taken for a wandering tone.
+SEPARATE_LINES = 3
 #: What is left at a tone's own aliases, or half a frame rate away (encoders alternate the quality of frames), and no
 #: stronger than this share of it is a trace of that tone: two tones there by chance are far rarer.
 CODING_TRACE = 0.30
@@ -266,7 +273,7 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) ->
     -------
     tones : list of Tone
     residual : ndarray, shape (pairs, bands)
-        What the tones leave of the data.
+        What the tones leave of the data; 0 where a sample carries no weight.
     """
     clock = data.clock
     grid = _search_grid(clock, data.duration_s, highest_hz)
@@ -303,7 +310,7 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) ->
         new = _Bundle(np.array([np.clip(moved[-1], grid[at] - 1 / data.duration_s, grid[at] + 1 / data.duration_s)]), True)
         bundles.append(new)
         coefficients, residual, _ = _fit_lines(_all(bundles), data, columns)
-        new = _widen(new, bundles, coefficients[-1], residual, periodogram, gain, samples, data)
+        new = _widen(new, bundles, residual, power, periodogram, gain, samples, data, columns)
         bundles[-1] = new
         coefficients, residual, _ = _fit_lines(_all(bundles), data, columns)
         reach = max(1.0 / data.duration_s, float(np.ptp(new.frequencies)) / 2 + 1 / data.duration_s)
@@ -315,8 +322,14 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) ->
     _put(bundles, frequencies)
     coefficients, residual, inverse = _fit_lines(frequencies, data, columns)
     tones = _describe(bundles, frequencies, coefficients, inverse, residual, periodogram, data, axis)
-    tones = [t for t in tones if t.amplitude_px >= max(least_px, t.amplitude_ci_px)]
+    tones = [t for t in tones if t.amplitude_px >= max(least_px, t.amplitude_ci_px) and _clear_of_blind(t, clock)]
     return sorted(tones, key=lambda t: -t.amplitude_px), residual
+
+
+def _clear_of_blind(tone: Tone, clock: Clock) -> bool:
+    """False for a tone whose frequency, with its wander, reaches into a blind interval: there it is leakage, mostly."""
+    reach = np.array([-1.0, 0.0, 1.0]) * (tone.wander_hz + tone.frequency_ci_hz)
+    return bool(observable(tone.frequency_hz + reach, clock).all())
 
 
 def _all(bundles: list[_Bundle]) -> np.ndarray:
@@ -330,29 +343,55 @@ def _put(bundles: list[_Bundle], frequencies: np.ndarray) -> None:
         at += len(bundle.frequencies)
 
 
-def _widen(new, bundles, coefficient, residual, periodogram, gain, samples, data) -> _Bundle:
-    """Turn a line into a bundle where its neighbourhood still holds power that one line cannot explain."""
+def _widen(new, bundles, residual, before, periodogram, gain, samples, data, columns) -> _Bundle:
+    """Turn a line into a bundle where its neighbourhood holds a crowd of power that a few steady lines cannot explain.
+
+    `before` is the periodogram before the line was fitted: the bundle as a whole must stand above both its sides in it,
+    so that no piece of a broad band passes for a wandering tone.
+    """
     grid, centre = periodogram.frequency_hz, float(new.frequencies[0])
-    left = periodogram.power(residual, data.weight)
-    around = float(np.interp(centre, grid, _side_noise(left, grid, MAX_WANDER * grid, 20.0)))
-    amplitude = 2 * np.sqrt(left / max(samples, 1)) / np.maximum(gain, 1e-3)
-    strong = (np.abs(grid - centre) <= MAX_WANDER * centre) & (left > 3 * around) & (amplitude > WANDER_SHARE * abs(coefficient))
-    # neighbours a resolution cell or more away may be tones of their own: a bundle needs a dense cluster of them
     spacing = 1.0 / data.duration_s
-    occupied = set(np.round((grid[strong] - centre) / spacing).astype(int).tolist()) | {0}
-    low = high = 0
-    while occupied & {low - 1, low - 2}:
-        low -= 1
-    while occupied & {high + 1, high + 2}:
-        high += 1
-    if high - low < 3:
+    others = [b for b in bundles if b is not new]
+    near = (np.abs(grid - centre) <= MAX_WANDER * centre) & observable(grid, data.clock)
+
+    def crowd(left: np.ndarray) -> np.ndarray:
+        power = periodogram.power(left, data.weight)
+        around = float(np.interp(centre, grid, _side_noise(power, grid, MAX_WANDER * grid, 20.0)))
+        amplitude = 2 * np.sqrt(power / max(samples, 1)) / np.maximum(gain, 1e-3)
+        strong = near & (power > 3 * around) & (amplitude > WANDER_SHARE * strength)
+        return np.where(strong, power, 0.0)
+
+    frequencies = _all(bundles)
+    coefficients, _, _ = _fit_lines(frequencies, data, columns)
+    strength = abs(coefficients[-1])
+    first = left = crowd(residual)
+    for _ in range(SEPARATE_LINES):
+        if not left.any():
+            return new  # steady neighbours, if any: they are found as tones of their own
+        frequencies = np.append(frequencies, grid[int(np.argmax(left))])
+        free = np.array([b.steady for b in bundles for _ in b.frequencies] + [True] * (len(frequencies) - len(_all(bundles))))
+        frequencies = _refine(frequencies, free, data, columns, 2)
+        left = crowd(_fit_lines(frequencies, data, columns)[1])
+    if not left.any():
         return new
+    occupied = set(np.round((grid[(first + left) > 0] - centre) / spacing).astype(int).tolist()) | {0}
+    reach = max(2, int(0.006 * centre / spacing))
+    low = high = 0
+    while occupied & set(range(low - reach, low)):
+        low -= 1
+    while occupied & set(range(high + 1, high + reach + 1)):
+        high += 1
     lines = centre + np.arange(low - 1, high + 2) * spacing
     lines = lines[observable(lines, data.clock)]  # inside a blind interval a line would be noise over nearly nothing
-    others = _all([b for b in bundles if b is not new])
-    if len(others):
-        lines = lines[np.min(np.abs(lines[:, None] - others), axis=1) > 0.5 * spacing]
-    return _Bundle(lines, False) if len(lines) > 3 else new
+    taken = _all(others)
+    if len(taken):
+        lines = lines[np.min(np.abs(lines[:, None] - taken), axis=1) > 0.5 * spacing]
+    if len(lines) <= 3:
+        return new
+    inside = (grid >= lines[0]) & (grid <= lines[-1])
+    half = (lines[-1] - lines[0]) / 2
+    beside = np.interp((lines[0] + lines[-1]) / 2, grid, _side_noise(before, grid, half + 2 * spacing, 15.0))
+    return _Bundle(lines, False) if before[inside].mean() > HUMP_RATIO * beside else new
 
 
 def _strengths(bundles: list[_Bundle], coefficients: np.ndarray) -> list[float]:
@@ -388,13 +427,17 @@ def _describe(bundles, frequencies, coefficients, inverse, residual, periodogram
     return out
 
 
+def _amplitude_ci(statistical: float, amplitude: float) -> float:
+    return float(np.sqrt(statistical ** 2 + (AMPLITUDE_SYSTEMATIC * amplitude) ** 2 + AMPLITUDE_SYSTEMATIC_PX ** 2))
+
+
 def _steady_tone(axis, f, c, variance, s2, data) -> Tone:
     amplitude = abs(c)
     slope = _frequency_slope(f, c, data) * np.sqrt(data.weight)
     curvature = float((slope ** 2).sum())
-    frequency_ci = 1.96 * np.sqrt(s2 / max(curvature, 1e-30))
+    frequency_ci = BOUND_FACTOR * 1.96 * np.sqrt(s2 / max(curvature, 1e-30))
     along = (c.real ** 2 * variance[0][0] + c.imag ** 2 * variance[1][0]) / max(amplitude ** 2, 1e-30)
-    amplitude_ci = np.hypot(1.96 * np.sqrt(along), AMPLITUDE_SYSTEMATIC * amplitude)
+    amplitude_ci = _amplitude_ci(BOUND_FACTOR * 1.96 * np.sqrt(along), amplitude)
     return Tone(axis, float(f), float(frequency_ci), float(amplitude), float(amplitude_ci), 0.0, (Line(float(f), complex(c)),))
 
 
@@ -408,7 +451,7 @@ def _wandering_tone(axis, f, c, variance, data) -> Tone:
     mean = float(f.mean() + np.sum(weight * turning) / weight.sum())
     spread = float(np.sqrt(np.sum(weight * (f.mean() + turning - mean) ** 2) / weight.sum()))
     amplitude = np.sqrt(power)
-    amplitude_ci = np.hypot(1.96 * np.sqrt(noise / len(f) * 2), AMPLITUDE_SYSTEMATIC * amplitude)
+    amplitude_ci = _amplitude_ci(BOUND_FACTOR * 1.96 * np.sqrt(2 * noise / len(f)), amplitude)
     independent = max(1.0, data.duration_s * 2 * max(spread, 1e-3))
     frequency_ci = 1.96 * spread / np.sqrt(independent) + 0.1 / data.duration_s
     lines = tuple(Line(float(a), complex(b)) for a, b in zip(f, c))
