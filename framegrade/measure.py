@@ -19,7 +19,7 @@ from framegrade.footage import ClipInfo, FootageError, ReadFaults, probe, read_f
 from framegrade.motion import make_grid, measure_motion
 from framegrade.path import Path as PicturePath
 from framegrade.path import SHAKE_ABOVE_HZ, crop_needed_pct, split_path
-from framegrade.picture import Cadence, disturbed_pairs, find_cadence_faults
+from framegrade.picture import Cadence, disturbed_pairs, find_cadence_faults, stalled_pairs
 from framegrade.records import AXES, MOTION_COLUMNS, RANGE_COLUMNS, SPECTRUM_COLUMNS, TONE_COLUMNS, WINDOW_COLUMNS, TakeRecord
 from framegrade.rows import (
     ASSUMED_HFOV_DEG, RowSignals, band_mean, band_signals, cut, focal_length_px, remove_slow, slow_half_width,
@@ -174,7 +174,10 @@ def assemble(info: ClipInfo, optics: Optics, limits: grading.Limits, signals: Ro
     """Record of a clip from its band signals: everything after the pictures have been read."""
     cadence = find_cadence_faults(signals.time_s, signals.next_time_s, signals.change_level, signals.whole_px[:, :2])
     signals = _without(signals, disturbed_pairs(cadence))
-    path = split_path(np.append(signals.time_s, signals.next_time_s[-1]), frame_steps(signals))
+    steps = frame_steps(signals)
+    # a repeated frame is a fault of cadence, judged as such: the path goes on at the speed around it
+    steps[stalled_pairs(cadence)] = np.nan
+    path = split_path(np.append(signals.time_s, signals.next_time_s[-1]), steps)
     vibration = analyse(signals, optics, info.width_px)
     residual = in_frame_residual(signals)
     jello = _jello(info, optics, vibration, residual, signals)
@@ -227,7 +230,7 @@ def analyse(signals: RowSignals, optics: Optics, width_px: int) -> Vibration:
 
 
 def _tones_of_axis(signals, axis, readout_s, highest, per_1920) -> tuple[list[Tone], list[FittedTone], RowSignals]:
-    """Tones of one axis over the take, the same as fitted stretch by stretch, and the signals without them."""
+    """Tones of one axis over the take, the same as fitted stretch by stretch, and the signals without them and sway."""
     span = signals.next_time_s[-1] - signals.time_s[0]
     count = max(1, int(round(span / STRETCH_S)))
     edges = np.linspace(0, signals.pairs, count + 1).astype(int)
@@ -243,8 +246,7 @@ def _tones_of_axis(signals, axis, readout_s, highest, per_1920) -> tuple[list[To
         tones, residual = find_tones(data, axis, highest, per_1920)
         found += tones
         fitted += [FittedTone(tone.lines, float(part.time_s[0]), float(part.next_time_s[-1])) for tone in tones]
-        if tones:
-            rest[first:last, :, axis] = np.where(data.weight > 0, residual, part.fast_px[..., axis])
+        rest[first:last, :, axis] = np.where(data.weight > 0, residual, part.fast_px[..., axis])
     return join_tones(found, count, LEAST_TONE_PX1920 * per_1920), fitted, replace(signals, fast_px=rest)
 
 

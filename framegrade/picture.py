@@ -74,8 +74,13 @@ def _long_steps(step: np.ndarray, repeated: np.ndarray) -> np.ndarray:
     return out
 
 
-def disturbed_pairs(cadence: Cadence) -> np.ndarray:
-    """Pairs whose interval on the exposure clock is not what the timestamps say: a repeat, and the step that follows."""
-    out = cadence.repeated | cadence.dropped
+def stalled_pairs(cadence: Cadence) -> np.ndarray:
+    """A repeat, and the step that follows it and makes up for it."""
+    out = cadence.repeated.copy()
     out[1:] |= cadence.repeated[:-1]
     return out
+
+
+def disturbed_pairs(cadence: Cadence) -> np.ndarray:
+    """Pairs whose interval on the exposure clock is not what the timestamps say."""
+    return stalled_pairs(cadence) | cadence.dropped

@@ -212,9 +212,8 @@ def _robust_bands(values: np.ndarray, information: np.ndarray, basis: np.ndarray
             break
         # one scale a pair, floored: the cells' own error estimate is relative, moving objects are local
         masked = np.where(used, distance, np.nan).reshape(len(values), -1)
-        with np.errstate(all="ignore"):
-            scale = np.nan_to_num(np.nanmedian(masked, axis=1), nan=1.0) / 0.8326  # median of a 2-d.o.f. Rayleigh / sqrt 2
-        scale = np.maximum(scale, 1e-3)
+        masked[~used.any(axis=(1, 2))] = 1.0
+        scale = np.maximum(np.nanmedian(masked, axis=1) / 0.8326, 1e-3)  # median of a 2-d.o.f. Rayleigh, over sqrt 2
         start = 3.0 if turn == 0 else 1.0  # a gentle first cut: the first fit is not robust yet
         weight = np.where(used, _biweight(distance / scale[:, None, None] / start), 0).astype(np.float32)
     return fit, inverse * (scale ** 2).reshape((-1,) + (1,) * (inverse.ndim - 1)), weight

@@ -31,6 +31,8 @@ FALSE_ALARM = 0.01
 LEAST_TONE_PX1920 = 0.03
 MAX_TONES = 12
 LOWEST_TONE_HZ = 4.0
+#: Sway that the temporal high-pass leaves is fitted by lines from here to here before any tone is sought.
+SLOW_LINES_HZ = (1.2, 3.3)
 #: Systematic parts of an amplitude's interval (95 %), from the campaign in tests/bench: relative, and in native pixels
 #: (coding swallows a little of the smallest motion).
 AMPLITUDE_SYSTEMATIC = 0.04
@@ -285,12 +287,12 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) ->
     least_px = LEAST_TONE_PX1920 * px_per_1920
     samples = float(data.weight.sum() ** 2 / max((data.weight ** 2).sum(), 1e-12))
 
-    bundles: list[_Bundle] = []
     columns: dict[float, np.ndarray] = {}
-    residual = data.values
-    strengths: list[float] = []
+    bundles = [_slow_bundle(data)]
+    coefficients, residual, _ = _fit_lines(_all(bundles), data, columns)
+    strengths = [0.0]
     blocked = ~seen
-    while len(bundles) < MAX_TONES:
+    while len(bundles) <= MAX_TONES:
         power = periodogram.power(residual, data.weight)
         noise = _line_noise(power, grid)
         hump = _hump_ratio(power, grid) > HUMP_RATIO
@@ -302,12 +304,15 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) ->
         if not candidate.any():
             break
         at = int(np.argmax(np.where(candidate, power, 0)))
-        start = _all(bundles)
-        frequencies = np.append(start, grid[at])
-        free = np.array([b.steady for b in bundles for _ in b.frequencies] + [True])
-        moved = _refine(frequencies, free, data, columns, 3)
+        frequencies = np.append(_all(bundles), grid[at])
+        moved = _refine(frequencies, np.append(_free(bundles), True), data, columns, 3)
+        near = np.abs(moved[:-1] - moved[-1]) < 0.6 / data.duration_s
+        if near.any() or abs(moved[-1] - grid[at]) > 1 / data.duration_s:
+            # it slid onto a line that is there already, or away: a remainder, not a tone
+            blocked = blocked | (np.abs(grid - grid[at]) < 1 / data.duration_s)
+            continue
         _put(bundles, moved[:-1])
-        new = _Bundle(np.array([np.clip(moved[-1], grid[at] - 1 / data.duration_s, grid[at] + 1 / data.duration_s)]), True)
+        new = _Bundle(moved[-1:], True)
         bundles.append(new)
         coefficients, residual, _ = _fit_lines(_all(bundles), data, columns)
         new = _widen(new, bundles, residual, power, periodogram, gain, samples, data, columns)
@@ -315,10 +320,8 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) ->
         coefficients, residual, _ = _fit_lines(_all(bundles), data, columns)
         reach = max(1.0 / data.duration_s, float(np.ptp(new.frequencies)) / 2 + 1 / data.duration_s)
         blocked = blocked | (np.abs(grid - new.frequencies.mean()) < reach)
-        strengths = _strengths(bundles, coefficients)
-    if not bundles:
-        return [], residual
-    frequencies = _refine(_all(bundles), np.array([b.steady for b in bundles for _ in b.frequencies]), data, columns)
+        strengths = [0.0] + _strengths(bundles, coefficients)[1:]
+    frequencies = _refine(_all(bundles), _free(bundles), data, columns)
     _put(bundles, frequencies)
     coefficients, residual, inverse = _fit_lines(frequencies, data, columns)
     tones = _describe(bundles, frequencies, coefficients, inverse, residual, periodogram, data, axis)
@@ -332,8 +335,19 @@ def _clear_of_blind(tone: Tone, clock: Clock) -> bool:
     return bool(observable(tone.frequency_hz + reach, clock).all())
 
 
+def _slow_bundle(data: _Data) -> _Bundle:
+    """Lines that follow whatever sway the high-pass let through, with its lean on the rows; never reported."""
+    spacing = 0.8 / data.duration_s
+    return _Bundle(np.arange(SLOW_LINES_HZ[0], SLOW_LINES_HZ[1] + spacing / 2, spacing), False)
+
+
 def _all(bundles: list[_Bundle]) -> np.ndarray:
     return np.concatenate([b.frequencies for b in bundles]) if bundles else np.zeros(0)
+
+
+def _free(bundles: list[_Bundle]) -> np.ndarray:
+    """Which lines' frequencies may move: those of steady tones."""
+    return np.array([b.steady for b in bundles for _ in b.frequencies])
 
 
 def _put(bundles: list[_Bundle], frequencies: np.ndarray) -> None:
@@ -369,7 +383,7 @@ def _widen(new, bundles, residual, before, periodogram, gain, samples, data, col
         if not left.any():
             return new  # steady neighbours, if any: they are found as tones of their own
         frequencies = np.append(frequencies, grid[int(np.argmax(left))])
-        free = np.array([b.steady for b in bundles for _ in b.frequencies] + [True] * (len(frequencies) - len(_all(bundles))))
+        free = np.append(_free(bundles), [True] * (len(frequencies) - len(_all(bundles))))
         frequencies = _refine(frequencies, free, data, columns, 2)
         left = crowd(_fit_lines(frequencies, data, columns)[1])
     if not left.any():
@@ -412,8 +426,8 @@ def _trace_mask(grid, frequencies, strength, clock, amplitude, resolution_hz) ->
 def _describe(bundles, frequencies, coefficients, inverse, residual, periodogram, data, axis) -> list[Tone]:
     grid = periodogram.frequency_hz
     noise = _line_noise(periodogram.power(residual, data.weight), grid)
-    out, at = [], 0
-    for bundle in bundles:
+    out, at = [], len(bundles[0].frequencies)
+    for bundle in bundles[1:]:
         index = np.arange(at, at + len(bundle.frequencies))
         at += len(index)
         f, c = frequencies[index], coefficients[index]
