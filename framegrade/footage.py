@@ -80,7 +80,8 @@ class ClipInfo:
     rotation_deg : int
         Clockwise turn a player applies for display: 0, 90, 180 or 270.
     frame_rate_hz : float
-        Average over the clip; NaN when neither container nor stream tells it.
+        Average over the clip, or what most frame intervals say where they are uneven (a few dropped frames do not make
+        another camera mode); NaN when neither container nor stream tells it.
     variable_frame_rate : bool or None
         True when frames are not evenly spaced by more than one tick of the container's clock. None when only
         reading the whole clip can tell.
@@ -476,12 +477,13 @@ def _packets(
 
 @dataclass(frozen=True)
 class _Index:
-    """What a table of samples says: presented frames, all entries, their bytes, and whether the spacing is uneven."""
+    """What a table of samples says: presented frames, all entries, their bytes, and how they are spaced."""
 
     frames: int
     entries: int
     coded_bytes: int
     uneven: bool
+    typical_ticks: float  # median spacing, in ticks of the stream's time base; NaN for a single entry
 
 
 def _sample_index(container: av.container.InputContainer, stream: av.VideoStream) -> _Index | None:
@@ -498,6 +500,7 @@ def _sample_index(container: av.container.InputContainer, stream: av.VideoStream
         entries=len(entries),
         coded_bytes=sum(entry.size for entry in entries),
         uneven=bool(ticks.size and ticks.max() - ticks.min() > 1),
+        typical_ticks=float(np.median(ticks)) if ticks.size else math.nan,
     )
 
 
@@ -573,6 +576,9 @@ def probe(path: str | os.PathLike[str]) -> ClipInfo:
         variable = None
         if index:
             variable = index.uneven
+            if index.uneven and index.typical_ticks > 0:
+                # dropped frames lower the average; the camera was set to what most intervals say
+                rate = 1 / float(index.typical_ticks * stream.time_base)
         elif frame.pts is not None and stream.average_rate and stream.base_rate:
             # The lowest rate that fits all timestamps against their average: they differ when frames are uneven.
             variable = True if abs(stream.average_rate / stream.base_rate - 1) > 0.001 else None

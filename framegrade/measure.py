@@ -19,7 +19,9 @@ from framegrade.footage import ClipInfo, FootageError, ReadFaults, probe, read_f
 from framegrade.motion import make_grid, measure_motion
 from framegrade.path import Path as PicturePath
 from framegrade.path import SHAKE_ABOVE_HZ, crop_needed_pct, split_path
-from framegrade.picture import Cadence, disturbed_pairs, find_cadence_faults, stalled_pairs
+from framegrade.picture import (
+    Cadence, CodingRhythm, disturbed_pairs, find_cadence_faults, find_coding_rhythm, stalled_pairs,
+)
 from framegrade.records import AXES, MOTION_COLUMNS, RANGE_COLUMNS, SPECTRUM_COLUMNS, TONE_COLUMNS, WINDOW_COLUMNS, TakeRecord
 from framegrade.rows import (
     ASSUMED_HFOV_DEG, RowSignals, band_mean, band_signals, cut, focal_length_px, remove_slow, slow_half_width,
@@ -134,21 +136,24 @@ def measure_clip(path: Path, settings: MeasureSettings | None = None,
     info = probe(path)
     optics = resolve_optics(info, settings)
     faults = ReadFaults()
-    signals = _read_signals(info, optics, settings.threads, faults, progress)
-    return assemble(info, optics, limits, signals, faults)
+    signals, sizes = _read_signals(info, optics, settings.threads, faults, progress)
+    return assemble(info, optics, limits, signals, faults, find_coding_rhythm(sizes, info.frame_rate_hz))
 
 
-def _read_signals(info, optics, threads, faults, progress) -> RowSignals:
+def _read_signals(info, optics, threads, faults, progress) -> tuple[RowSignals, np.ndarray]:
+    """Band signals of a clip, and the coded size of its frames in bytes (NaN where unknown)."""
     try:
         grid = make_grid(info.width_px, info.height_px)
     except ValueError as error:
         raise FootageError(info.path, str(error)) from None
     damaged: list[bool] = []
+    sizes: list[float] = []
     expected = info.frame_count or 0
 
     def frames() -> Iterator[tuple[float, np.ndarray]]:
         for frame in read_frames(info.path, threads=threads, faults=faults):
             damaged.append(frame.damaged)
+            sizes.append(np.nan if frame.size_bytes is None else frame.size_bytes)
             if progress is not None and expected and frame.index % 10 == 0:
                 progress(min(0.95, 0.95 * frame.index / expected))
             yield frame.time_s, frame.luma
@@ -167,10 +172,11 @@ def _read_signals(info, optics, threads, faults, progress) -> RowSignals:
     span = float(signals.next_time_s[-1] - signals.time_s[0]) + float(np.median(signals.next_time_s - signals.time_s))
     if span < SHORTEST_CLIP_S - 1e-6:
         raise FootageError(info.path, f"lasts {span:.2f} s: at least {SHORTEST_CLIP_S:g} s is needed to part vibration from motion")
-    return signals
+    return signals, np.array(sizes)
 
 
-def assemble(info: ClipInfo, optics: Optics, limits: grading.Limits, signals: RowSignals, faults: ReadFaults) -> TakeRecord:
+def assemble(info: ClipInfo, optics: Optics, limits: grading.Limits, signals: RowSignals, faults: ReadFaults,
+             rhythm: CodingRhythm | None = None) -> TakeRecord:
     """Record of a clip from its band signals: everything after the pictures have been read."""
     cadence = find_cadence_faults(signals.time_s, signals.next_time_s, signals.change_level, signals.whole_px[:, :2])
     signals = _without(signals, disturbed_pairs(cadence))
@@ -178,7 +184,7 @@ def assemble(info: ClipInfo, optics: Optics, limits: grading.Limits, signals: Ro
     # a repeated frame is a fault of cadence, judged as such: the path goes on at the speed around it
     steps[stalled_pairs(cadence)] = np.nan
     path = split_path(np.append(signals.time_s, signals.next_time_s[-1]), steps)
-    vibration = analyse(signals, optics, info.width_px)
+    vibration = analyse(signals, optics, info.width_px, rhythm)
     residual = in_frame_residual(signals)
     jello = _jello(info, optics, vibration, residual, signals)
     windows = _windows(info, optics, limits, signals, path, cadence, vibration, jello)
@@ -207,7 +213,7 @@ def in_frame_residual(signals: RowSignals) -> np.ndarray:
     return signals.fast_px - band_mean(signals.fast_px)[:, None, :]
 
 
-def analyse(signals: RowSignals, optics: Optics, width_px: int) -> Vibration:
+def analyse(signals: RowSignals, optics: Optics, width_px: int, rhythm: CodingRhythm | None = None) -> Vibration:
     """Tones and levels of all axes."""
     per_1920 = width_px / screen.REFERENCE_WIDTH_PX
     if optics.readout_s is None:
@@ -219,7 +225,7 @@ def analyse(signals: RowSignals, optics: Optics, width_px: int) -> Vibration:
     tones: list[Tone] = []
     levels: list[Levels | None] = []
     for axis in range(3):
-        found, fitted, rest = _tones_of_axis(signals, axis, optics.readout_s, highest, per_1920)
+        found, fitted, rest = _tones_of_axis(signals, axis, optics.readout_s, highest, per_1920, rhythm)
         tones += found
         level = measure_levels(rest, axis, clock, highest)
         levels.append(add_tones(level, fitted, signals.next_time_s[-1] - signals.time_s[0]) if level is not None else None)
@@ -229,7 +235,7 @@ def analyse(signals: RowSignals, optics: Optics, width_px: int) -> Vibration:
     return Vibration(clock, tuple(levels), tones, ())
 
 
-def _tones_of_axis(signals, axis, readout_s, highest, per_1920) -> tuple[list[Tone], list[FittedTone], RowSignals]:
+def _tones_of_axis(signals, axis, readout_s, highest, per_1920, rhythm) -> tuple[list[Tone], list[FittedTone], RowSignals]:
     """Tones of one axis over the take, the same as fitted stretch by stretch, and the signals without them and sway."""
     span = signals.next_time_s[-1] - signals.time_s[0]
     count = max(1, int(round(span / STRETCH_S)))
@@ -243,7 +249,7 @@ def _tones_of_axis(signals, axis, readout_s, highest, per_1920) -> tuple[list[To
         data = axis_data(part, axis, clock)
         if data is None:
             continue
-        tones, residual = find_tones(data, axis, highest, per_1920)
+        tones, residual = find_tones(data, axis, highest, per_1920, rhythm)
         found += tones
         fitted += [FittedTone(tone.lines, float(part.time_s[0]), float(part.next_time_s[-1])) for tone in tones]
         rest[first:last, :, axis] = np.where(data.weight > 0, residual, part.fast_px[..., axis])

@@ -22,6 +22,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 from scipy.ndimage import median_filter
 
+from framegrade.picture import CodingRhythm
 from framegrade.rows import RowSignals
 from framegrade.spectrum.response import Clock, difference_gain, difference_response, observable
 
@@ -29,6 +30,8 @@ FALSE_ALARM = 0.01
 #: Nothing weaker than this is called a tone, whatever its significance (px per 1920 of width, peak): coding and
 #: resampling leave periodic traces of this size.
 LEAST_TONE_PX1920 = 0.03
+#: At a frequency of the encoder's own rhythm nothing weaker than this is believed (px per 1920 of width, peak).
+CODED_TONE_PX1920 = 0.12
 MAX_TONES = 12
 LOWEST_TONE_HZ = 4.0
 #: Sway that the temporal high-pass leaves is fitted by lines from here to here before any tone is sought.
@@ -258,7 +261,8 @@ class _Bundle:
     steady: bool
 
 
-def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) -> tuple[list[Tone], np.ndarray]:
+def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float,
+               rhythm: CodingRhythm | None = None) -> tuple[list[Tone], np.ndarray]:
     """Tones of one axis, strongest first.
 
     Parameters
@@ -270,6 +274,8 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) ->
         End of the search.
     px_per_1920 : float
         Native pixels per pixel of a 1920-wide picture (width / 1920).
+    rhythm : CodingRhythm, optional
+        Where the encoder's own rhythm leaves traces: weak tones there are not believed.
 
     Returns
     -------
@@ -292,6 +298,9 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) ->
     coefficients, residual, _ = _fit_lines(_all(bundles), data, columns)
     strengths = [0.0]
     blocked = ~seen
+    coded = np.zeros(len(grid), bool)
+    if rhythm is not None:
+        coded = rhythm.near(grid, clock.frame_rate_hz, 1.0 / data.duration_s)
     while len(bundles) <= MAX_TONES:
         power = periodogram.power(residual, data.weight)
         noise = _line_noise(power, grid)
@@ -299,6 +308,7 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float) ->
         # amplitude of a sinusoid that would explain this much (power of a line: (A g / 2)^2 x samples)
         amplitude = 2 * np.sqrt(power / max(samples, 1)) / np.maximum(gain, 1e-3)
         candidate = ~blocked & ((power > threshold * noise) | hump) & (amplitude > least_px)
+        candidate &= ~(coded & (amplitude < CODED_TONE_PX1920 * px_per_1920))
         for bundle, own in zip(bundles, strengths):
             candidate &= ~_trace_mask(grid, bundle.frequencies, own, clock, amplitude, 1 / data.duration_s)
         if not candidate.any():
