@@ -18,7 +18,7 @@ Motion = Callable[[np.ndarray], np.ndarray]
 
 BANDS = 30
 #: Rows averaged within a band: Gauss-Legendre nodes, exact for far faster motion than the rows resolve.
-_NODES, _WEIGHTS = np.polynomial.legendre.leggauss(5)
+_NODES, _WEIGHTS = np.polynomial.legendre.leggauss(3)
 
 
 def frame_times(frame_rate_hz: float, duration_s: float) -> np.ndarray:
@@ -48,7 +48,7 @@ def wandering_tone(frequency_hz: float, amplitude_px: float, wander_pct: float, 
     return motion
 
 
-def broadband(low_hz: float, high_hz: float, rms_px: float, seed: int = 1, lines_per_hz: float = 12.3) -> Motion:
+def broadband(low_hz: float, high_hz: float, rms_px: float, seed: int = 1, lines_per_hz: float = 4.3) -> Motion:
     """Gaussian vibration, flat from `low_hz` to `high_hz`: many sinusoids of random phase and Rayleigh amplitude."""
     rng = np.random.default_rng(seed)
     count = int((high_hz - low_hz) * lines_per_hz)
