@@ -5,17 +5,21 @@ footage -> motion -> rows -> spectrum, path, picture -> grading -> TakeRecord
 
 from __future__ import annotations
 
+import os
 from collections.abc import Callable, Iterator
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
 from pathlib import Path
 
 import cv2
 import numpy as np
 import pandas as pd
+from threadpoolctl import threadpool_limits
 
 from framegrade import grading, screen
 from framegrade.camera import Camera
 from framegrade.footage import ClipInfo, FootageError, ReadFaults, probe, read_frames, timecode
+from framegrade.memory import keep_large_blocks
 from framegrade.motion import make_grid, measure_motion
 from framegrade.path import Path as PicturePath
 from framegrade.path import SHAKE_ABOVE_HZ, crop_needed_pct, split_path
@@ -30,10 +34,11 @@ from framegrade.spectrum.bands import band_power, third_octave_bands
 from framegrade.spectrum.folded import FoldedTone, find_folded_tones, fold
 from framegrade.spectrum.levels import FittedTone, Levels, add_tones, bridged, measure_levels
 from framegrade.spectrum.response import SLOWEST_ALIAS_HZ, Clock, exposure_clock, highest_frequency_hz
-from framegrade.spectrum.tones import LEAST_TONE_PX1920, Tone, axis_data, find_tones
+from framegrade.spectrum.tones import LEAST_TONE_PX1920, Periodogram, Tone, axis_data, find_tones, stretch_periodogram
 
 SHORTEST_CLIP_S = 1.0
 WINDOW_S = 0.5
+CADENCE_SPAN_S = 1.0
 HIGHEST_HZ = 1000.0
 #: Tones are fitted in stretches of about this length: long enough to part close tones, short enough for a drift.
 STRETCH_S = 8.0
@@ -130,14 +135,18 @@ def measure_clip(path: Path, settings: MeasureSettings | None = None,
         If the clip cannot be read, or is too short or too small to measure; one sentence.
     """
     settings = settings or MeasureSettings()
-    if settings.threads:
-        cv2.setNumThreads(settings.threads)
+    # pairs of frames are measured side by side; splitting each small operation as well would only cost
+    cv2.setNumThreads(1)
+    keep_large_blocks()
     limits = settings.limits or grading.load_limits(None)
     info = probe(path)
     optics = resolve_optics(info, settings)
     faults = ReadFaults()
-    signals, sizes = _read_signals(info, optics, settings.threads, faults, progress)
-    return assemble(info, optics, limits, signals, faults, find_coding_rhythm(sizes, info.frame_rate_hz))
+    workers = settings.threads or os.cpu_count() or 1
+    # one thread a library call: what runs side by side here are pairs of frames, and axes
+    with threadpool_limits(1):
+        signals, sizes = _read_signals(info, optics, workers, faults, progress)
+        return assemble(info, optics, limits, signals, faults, find_coding_rhythm(sizes, info.frame_rate_hz), workers)
 
 
 def _read_signals(info, optics, threads, faults, progress) -> tuple[RowSignals, np.ndarray]:
@@ -159,8 +168,8 @@ def _read_signals(info, optics, threads, faults, progress) -> tuple[RowSignals, 
             yield frame.time_s, frame.luma
 
     def intact() -> Iterator:
-        for pair in measure_motion(frames(), grid, info.luma_scale):
-            if damaged[-1] or damaged[-2]:
+        for first, pair in enumerate(measure_motion(frames(), grid, info.luma_scale, threads)):
+            if damaged[first] or damaged[first + 1]:
                 pair = replace(pair, information=np.zeros_like(pair.information))
             yield pair
 
@@ -176,7 +185,7 @@ def _read_signals(info, optics, threads, faults, progress) -> tuple[RowSignals, 
 
 
 def assemble(info: ClipInfo, optics: Optics, limits: grading.Limits, signals: RowSignals, faults: ReadFaults,
-             rhythm: CodingRhythm | None = None) -> TakeRecord:
+             rhythm: CodingRhythm | None = None, workers: int = 1) -> TakeRecord:
     """Record of a clip from its band signals: everything after the pictures have been read."""
     cadence = find_cadence_faults(signals.time_s, signals.next_time_s, signals.change_level, signals.whole_px[:, :2])
     signals = _without(signals, disturbed_pairs(cadence))
@@ -184,7 +193,7 @@ def assemble(info: ClipInfo, optics: Optics, limits: grading.Limits, signals: Ro
     # a repeated frame is a fault of cadence, judged as such: the path goes on at the speed around it
     steps[stalled_pairs(cadence)] = np.nan
     path = split_path(np.append(signals.time_s, signals.next_time_s[-1]), steps)
-    vibration = analyse(signals, optics, info.width_px, rhythm)
+    vibration = analyse(signals, optics, info.width_px, rhythm, workers)
     residual = in_frame_residual(signals)
     jello = _jello(info, optics, vibration, residual, signals)
     windows = _windows(info, optics, limits, signals, path, cadence, vibration, jello)
@@ -213,8 +222,9 @@ def in_frame_residual(signals: RowSignals) -> np.ndarray:
     return signals.fast_px - band_mean(signals.fast_px)[:, None, :]
 
 
-def analyse(signals: RowSignals, optics: Optics, width_px: int, rhythm: CodingRhythm | None = None) -> Vibration:
-    """Tones and levels of all axes."""
+def analyse(signals: RowSignals, optics: Optics, width_px: int, rhythm: CodingRhythm | None = None,
+            workers: int = 1) -> Vibration:
+    """Tones and levels of all axes; `workers` threads share the work and do not change the result."""
     per_1920 = width_px / screen.REFERENCE_WIDTH_PX
     if optics.readout_s is None:
         clock = exposure_clock(signals, 0.0)
@@ -222,38 +232,58 @@ def analyse(signals: RowSignals, optics: Optics, width_px: int, rhythm: CodingRh
         return Vibration(None, (None, None, None), (), tuple(sorted(folded, key=lambda t: -t.amplitude_px)))
     clock = exposure_clock(signals, optics.readout_s)
     highest = min(HIGHEST_HZ, highest_frequency_hz(clock, len(signals.height)))
-    tones: list[Tone] = []
-    levels: list[Levels | None] = []
-    for axis in range(3):
-        found, fitted, rest = _tones_of_axis(signals, axis, optics.readout_s, highest, per_1920, rhythm)
-        tones += found
-        level = measure_levels(rest, axis, clock, highest)
-        levels.append(add_tones(level, fitted, signals.next_time_s[-1] - signals.time_s[0]) if level is not None else None)
+    found: list[list[list[Tone]]] = [[], [], []]
+    fitted: list[list[FittedTone]] = [[], [], []]
+    rest = signals.fast_px.copy()
+    # the axes are independent, and the arithmetic runs outside the interpreter's lock
+    with ThreadPoolExecutor(max(1, workers)) as pool:
+        for stretch in _stretches(signals, optics.readout_s, highest):
+            work = [pool.submit(_tones_of_stretch, signals, axis, stretch, per_1920, rhythm) for axis in range(3)]
+            start, stop = float(signals.time_s[stretch.first]), float(signals.next_time_s[stretch.last - 1])
+            for axis, done in enumerate(work):
+                tones, rest[stretch.first:stretch.last, :, axis] = done.result()
+                found[axis].append(tones)
+                fitted[axis] += [FittedTone(tone.lines, start, stop) for tone in tones]
+        plain = replace(signals, fast_px=rest)
+        levels = list(pool.map(lambda axis: measure_levels(plain, axis, clock, highest), range(3)))
+    span = float(signals.next_time_s[-1] - signals.time_s[0])
+    levels = [add_tones(level, fitted[axis], span) if level is not None else None for axis, level in enumerate(levels)]
+    least = LEAST_TONE_PX1920 * per_1920
+    tones = [tone for parts in found for tone in join_tones(sum(parts, []), len(parts), least)]
     tones = tuple(sorted(tones, key=lambda t: -t.amplitude_px))
     if optics.readout_s == 0:
         return Vibration(clock, tuple(levels), (), tuple(fold(tone, clock.interval_s) for tone in tones))
     return Vibration(clock, tuple(levels), tones, ())
 
 
-def _tones_of_axis(signals, axis, readout_s, highest, per_1920, rhythm) -> tuple[list[Tone], list[FittedTone], RowSignals]:
-    """Tones of one axis over the take, the same as fitted stretch by stretch, and the signals without them and sway."""
-    span = signals.next_time_s[-1] - signals.time_s[0]
-    count = max(1, int(round(span / STRETCH_S)))
+@dataclass(frozen=True)
+class _Stretch:
+    """Pairs `first` to `last` of a take, in which tones are taken for steady or nearly so, with their search kernel."""
+
+    first: int
+    last: int
+    clock: Clock
+    periodogram: Periodogram
+
+
+def _stretches(signals: RowSignals, readout_s: float, highest_hz: float) -> Iterator[_Stretch]:
+    count = max(1, int(round((signals.next_time_s[-1] - signals.time_s[0]) / STRETCH_S)))
     edges = np.linspace(0, signals.pairs, count + 1).astype(int)
-    found: list[Tone] = []
-    fitted: list[FittedTone] = []
-    rest = signals.fast_px.copy()
     for first, last in zip(edges[:-1], edges[1:]):
-        part = cut(signals, first, last)
-        clock = exposure_clock(part, readout_s)
-        data = axis_data(part, axis, clock)
-        if data is None:
-            continue
-        tones, residual = find_tones(data, axis, highest, per_1920, rhythm)
-        found += tones
-        fitted += [FittedTone(tone.lines, float(part.time_s[0]), float(part.next_time_s[-1])) for tone in tones]
-        rest[first:last, :, axis] = np.where(data.weight > 0, residual, part.fast_px[..., axis])
-    return join_tones(found, count, LEAST_TONE_PX1920 * per_1920), fitted, replace(signals, fast_px=rest)
+        clock = exposure_clock(cut(signals, first, last), readout_s)
+        duration = float(signals.next_time_s[last - 1] - signals.time_s[first])
+        yield _Stretch(first, last, clock, stretch_periodogram(clock, duration, highest_hz))
+
+
+def _tones_of_stretch(signals: RowSignals, axis: int, stretch: _Stretch, per_1920: float,
+                      rhythm: CodingRhythm | None) -> tuple[list[Tone], np.ndarray]:
+    """Tones of one axis in one stretch, and the signal without them and without sway."""
+    part = cut(signals, stretch.first, stretch.last)
+    data = axis_data(part, axis, stretch.clock)
+    if data is None:
+        return [], part.fast_px[..., axis]
+    tones, residual = find_tones(data, axis, stretch.periodogram, per_1920, rhythm)
+    return tones, np.where(data.weight > 0, residual, part.fast_px[..., axis])
 
 
 def join_tones(found: list[Tone], stretches: int, least_px: float) -> list[Tone]:
@@ -351,8 +381,8 @@ def _rms(values: np.ndarray) -> float:
     return float(np.sqrt(np.mean(values))) if len(values) and np.isfinite(values).all() else np.nan
 
 
-def _figures(info, optics, limits, path, cadence, vibration, jello_px, frames: slice, pairs: slice) -> dict[str, float]:
-    """Component figures over some frames."""
+def _figures(info, optics, path, cadence, vibration, jello_px, frames: slice, pairs: slice) -> dict[str, float]:
+    """Component figures over some frames; the share of faulty frames over some pairs."""
     weights = screen.axis_weights(info.width_px, info.height_px)
     figures = {
         "sway": float(screen.to_px1920(_rms(path.sway_px[frames] ** 2 @ weights), info.width_px)),
@@ -398,7 +428,9 @@ def _windows(info, optics, limits, signals, path: PicturePath, cadence: Cadence,
         else:
             local = float(np.interp((start + stop) / 2, jello.window_s[ok], jello.window_px[ok])) if ok.any() else np.nan
         measured = 100 * float(np.mean(signals.measured[pairs])) if signals.measured[pairs].size else np.nan
-        figures = _figures(info, optics, limits, path, cadence, vibration, local, frames, pairs)
+        # one repeat is a large share of half a second: the share is taken over a longer span
+        around = slice(*np.searchsorted(signals.time_s, [start - CADENCE_SPAN_S, stop + CADENCE_SPAN_S]))
+        figures = _figures(info, optics, path, cadence, vibration, local, frames, around)
         judged = measured >= limits.least_measured_pct
         verdict = grading.judge(figures, limits) if judged else grading.Verdict(np.nan, None, np.nan)
         reason = grading.phrase(verdict.component, verdict.figure) if verdict.component else \
@@ -507,7 +539,7 @@ def _record(info, optics, limits, signals, path, cadence, vibration, jello, resi
     crop = float(np.percentile(crop_needed_pct(deviation, info.width_px, info.height_px), 98))
     below_floor = np.isfinite(jello.px) and jello.px < jello.floor_px
     jello_px = jello.floor_px if below_floor else jello.px
-    figures = _figures(info, optics, limits, path, cadence, vibration, jello_px, slice(None), slice(None))
+    figures = _figures(info, optics, path, cadence, vibration, jello_px, slice(None), slice(None))
     ranges = grading.usable_ranges(windows["start_s"].to_numpy(), windows["end_s"].to_numpy(), windows["score"].to_numpy(float), limits)
     grade, score, reason = grading.grade_take(figures, crop, measured, ranges, duration, limits)
     judged = grade is not None
@@ -538,7 +570,7 @@ def _record(info, optics, limits, signals, path, cadence, vibration, jello, resi
     return TakeRecord(
         take, tones, spectrum, pd.DataFrame(range_rows, columns=list(RANGE_COLUMNS)),
         _motion_table(signals, path, cadence, residual, weights), windows, density_table(vibration),
-        residual[..., 0], signals.time_s, tuple(notes), _extra(info, optics, signals, cadence, vibration, jello),
+        residual[..., 0], signals.time_s, tuple(notes), _extra(info, optics, limits, signals, cadence, vibration, jello),
     )
 
 
@@ -583,10 +615,10 @@ def _candidate_note(tone: FoldedTone) -> str:
             f"candidate frequencies{needed}: {shown}")
 
 
-def _extra(info, optics, signals, cadence, vibration, jello) -> dict:
+def _extra(info, optics, limits, signals, cadence, vibration, jello) -> dict:
     return {
         "readout_s": optics.readout_s, "hfov_deg": optics.hfov_deg, "exposure_s": optics.exposure_s,
-        "focal_px": optics.focal_px, "rotation_deg": info.rotation_deg, "start_timecode": info.start_timecode,
+        "usable_score": limits.usable_score, "focal_px": optics.focal_px, "rotation_deg": info.rotation_deg, "start_timecode": info.start_timecode,
         "jello_floor_px1920": float(screen.to_px1920(jello.floor_px, info.width_px)) if np.isfinite(jello.floor_px) else None,
         "repeated_frames": int(cadence.repeated.sum()), "dropped_gaps": int(cadence.dropped.sum()),
         "uneven_share": float(cadence.uneven), "frozen_pct": 100 * float(np.mean(signals.frozen)),

@@ -15,7 +15,9 @@ estimates towards zero; here the expected noise power is taken off the normal ma
 
 from __future__ import annotations
 
+from collections import deque
 from collections.abc import Iterable, Iterator
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 
 import cv2
@@ -379,8 +381,9 @@ def _frozen_cells(difference: np.ndarray, flow: np.ndarray, coarse_step: float, 
     return (cells < SAME_PICTURE_LEVEL) & moving
 
 
-def measure_motion(frames: Iterable[tuple[float, np.ndarray]], grid: Grid, luma_scale: float = 1.0) -> Iterator[PairMotion]:
-    """Displacements of every pair of neighbouring frames, one pair at a time.
+def measure_motion(frames: Iterable[tuple[float, np.ndarray]], grid: Grid, luma_scale: float = 1.0,
+                   workers: int = 1) -> Iterator[PairMotion]:
+    """Displacements of every pair of neighbouring frames, one pair at a time, in order.
 
     Parameters
     ----------
@@ -390,6 +393,9 @@ def measure_motion(frames: Iterable[tuple[float, np.ndarray]], grid: Grid, luma_
         From `make_grid`.
     luma_scale : float
         What brings the luma plane to 0..255 (1 for 8 bits, 1/4 for 10).
+    workers : int
+        Threads that measure pairs side by side (the arithmetic runs outside the interpreter's lock). The result does
+        not depend on it.
 
     Yields
     ------
@@ -397,8 +403,15 @@ def measure_motion(frames: Iterable[tuple[float, np.ndarray]], grid: Grid, luma_
         One fewer than there are frames.
     """
     previous = None
-    for time_s, luma in frames:
-        current = _prepare(time_s, luma, luma_scale, grid)
-        if previous is not None:
-            yield measure_pair(previous, current, grid)
-        previous = current
+    pending: deque = deque()
+    with ThreadPoolExecutor(max(1, workers)) as pool:
+        for time_s, luma in frames:
+            current = _prepare(time_s, luma, luma_scale, grid)
+            if previous is not None:
+                pending.append(pool.submit(measure_pair, previous, current, grid))
+            previous = current
+            # a short queue keeps memory flat however long the clip
+            while len(pending) > 2 * workers:
+                yield pending.popleft().result()
+        while pending:
+            yield pending.popleft().result()

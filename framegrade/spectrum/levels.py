@@ -25,7 +25,7 @@ from framegrade.spectrum.tones import Line
 
 WINDOW_S = 1.0
 HOP_S = 0.5
-MM_TURNS = 40
+MM_TURNS = 30
 MIN_BANDS = 4
 BRIDGE_HZ = 10.0
 
@@ -210,27 +210,30 @@ def _variance_components(spectra, waves, inside, relative):
     root = 1 / np.sqrt(relative)
     y = np.moveaxis(spectra, 0, 1) * root                  # (bins, windows, bands)
     a = waves * root * inside[..., None]                   # (bins, orders, bands)
+    across, back = np.swapaxes(a, 1, 2), a.conj()
     count = len(relative)
-    sample = np.einsum("jwb,jwc->jbc", y, y.conj()) / y.shape[1]
-    own = np.einsum("jkb,jkb->jk", a.conj(), a).real
-    beam = np.einsum("jkb,jbc,jkc->jk", a.conj(), sample, a, optimize=True).real
+    sample = np.swapaxes(y, 1, 2) @ y.conj() / y.shape[1]
+    own = (np.abs(a) ** 2).sum(-1)
+    beam = ((back @ sample) * a).sum(-1).real
     total = np.einsum("jbb->j", sample).real / count
     power = np.where(inside, np.maximum(beam / np.maximum(own, 1e-12) ** 2, 1e-12), 0.0) * 0.5
     noise = 0.1 * total + 1e-18
     eye = np.eye(count)
+
+    def inverse_model() -> np.ndarray:
+        return np.linalg.inv((across * power[:, None, :]) @ back + noise[:, None, None] * eye)
+
     for _ in range(MM_TURNS):
-        model = np.einsum("jk,jkb,jkc->jbc", power, a, a.conj(), optimize=True) + noise[:, None, None] * eye
-        inverse = np.linalg.inv(model)
-        left = np.einsum("jkb,jbc->jkc", a.conj(), inverse)              # a^H R^-1
-        fit = np.einsum("jkc,jcd,jkd->jk", left, sample, left.conj(), optimize=True).real
-        expected = np.einsum("jkc,jkc->jk", left, a).real
+        inverse = inverse_model()
+        left = back @ inverse                              # w^H R^-1 of every wave
+        fit = ((left @ sample) * left.conj()).sum(-1).real
+        expected = (left * a).sum(-1).real
+        spread = ((inverse @ sample) * np.swapaxes(inverse, 1, 2)).sum((1, 2)).real
         power = power * np.sqrt(np.maximum(fit, 0) / np.maximum(expected, 1e-30))
-        whole = np.einsum("jbc,jcd,jdb->j", inverse, sample, inverse, optimize=True).real
-        noise = noise * np.sqrt(whole / np.einsum("jbb->j", inverse).real)
-    model = np.einsum("jk,jkb,jkc->jbc", power, a, a.conj(), optimize=True) + noise[:, None, None] * eye
-    left = np.einsum("jkb,jbc->jkc", a.conj(), np.linalg.inv(model))
-    mean = power[:, None] * np.einsum("jkc,jwc->jwk", left, y)
-    spare = power - power ** 2 * np.einsum("jkc,jkc->jk", left, a).real
+        noise = noise * np.sqrt(spread / np.einsum("jbb->j", inverse).real)
+    left = back @ inverse_model()
+    mean = power[:, None] * (y @ np.swapaxes(left, 1, 2))
+    spare = power - power ** 2 * (left * a).sum(-1).real
     posterior = np.abs(mean) ** 2 + spare[:, None]
     return power, noise, np.moveaxis(posterior, 1, 0)
 

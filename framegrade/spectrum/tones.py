@@ -141,7 +141,7 @@ def _search_grid(clock: Clock, duration_s: float, highest_hz: float) -> np.ndarr
     return np.arange(LOWEST_TONE_HZ, highest_hz, 1.0 / (OVERSAMPLING * duration_s))
 
 
-class _Periodogram:
+class Periodogram:
     """Matched filter of the exposure clock at every search frequency (the kernel is shared by all residuals)."""
 
     def __init__(self, clock: Clock, grid_hz: np.ndarray) -> None:
@@ -261,7 +261,12 @@ class _Bundle:
     steady: bool
 
 
-def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float,
+def stretch_periodogram(clock: Clock, duration_s: float, highest_hz: float) -> Periodogram:
+    """The search grid of a stretch with its matched filter; the same for all axes."""
+    return Periodogram(clock, _search_grid(clock, duration_s, highest_hz))
+
+
+def find_tones(data: _Data, axis: int, periodogram: Periodogram, px_per_1920: float,
                rhythm: CodingRhythm | None = None) -> tuple[list[Tone], np.ndarray]:
     """Tones of one axis, strongest first.
 
@@ -270,8 +275,8 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float,
     data : from `axis_data`
     axis : int
         0 yaw, 1 pitch, 2 roll.
-    highest_hz : float
-        End of the search.
+    periodogram : Periodogram
+        From `stretch_periodogram`, for the same clock.
     px_per_1920 : float
         Native pixels per pixel of a 1920-wide picture (width / 1920).
     rhythm : CodingRhythm, optional
@@ -283,12 +288,10 @@ def find_tones(data: _Data, axis: int, highest_hz: float, px_per_1920: float,
     residual : ndarray, shape (pairs, bands)
         What the tones leave of the data; 0 where a sample carries no weight.
     """
-    clock = data.clock
-    grid = _search_grid(clock, data.duration_s, highest_hz)
+    clock, grid = data.clock, periodogram.frequency_hz
     seen = observable(grid, clock)
     gain = difference_gain(grid, clock)
-    periodogram = _Periodogram(clock, grid)
-    independent = 2 * highest_hz * data.duration_s / 2
+    independent = grid[-1] * data.duration_s
     threshold = detection_ratio(independent)
     least_px = LEAST_TONE_PX1920 * px_per_1920
     samples = float(data.weight.sum() ** 2 / max((data.weight ** 2).sum(), 1e-12))
