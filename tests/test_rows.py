@@ -236,6 +236,24 @@ def test_parallax_that_is_smooth_in_time_is_no_vibration():
     assert np.sqrt(np.nanmean((found - fast(steps))[inner] ** 2)) < 0.005
 
 
+@pytest.mark.parametrize("share", [
+    pytest.param(0.7, id="mostly there"),
+    pytest.param(0.1, id="mostly not", marks=pytest.mark.xfail(
+        strict=True, reason="the steady flow is fitted to cells that exist in half of all pairs, however few those are: with none "
+        "the whole picture's slow motion is lost")),
+])
+def test_cells_that_come_and_go_still_tell_the_pan(share):
+    """A pan of 3 px a frame over sparse scenery: each cell is measured in runs of ten pairs, at `share` of the time."""
+    rng = np.random.default_rng(15)
+    there = np.repeat(rng.uniform(size=(10, GRID.bands, GRID.columns)) < share, 10, axis=0)
+    flows = []
+    for n in range(100):
+        p = pair(n, projected_flow([3.0, 0.5, 0.0]) + 0.01 * rng.normal(size=(GRID.bands, GRID.columns, 2)), information=1e4)
+        flows.append(replace(p, information=p.information * there[n][..., None], flow_px=p.flow_px * there[n][..., None]))
+    signals = fit_block(flows, GRID, FOCAL_PX)
+    assert np.abs(signals.whole_px - [3.0, 0.5, 0.0]).max() < 0.1
+
+
 # --- blocks ----------------------------------------------------------------------------------------------------------
 
 

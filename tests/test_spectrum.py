@@ -295,8 +295,8 @@ def test_intervals_hold_the_truth(many_tones):
 def test_frequency_errors_meet_the_cramer_rao_bound(many_tones):
     """Rife and Boorstyn 1974: var(f) >= 2 s^2 / ((2 pi A g)^2 sum (t - mean)^2), g the gain of the frame difference.
 
-    The errors of 40 tones, over the bound's deviation, have an rms near 1 (that of 40 normal numbers is 1 +- 0.11). The
-    reported intervals are never narrower than the bound's, and not three times wider: footage scatters more than rows do.
+    Errors over the bound's deviation, by their median (1.4826 of it for normal numbers), are near 1. The reported intervals
+    are never narrower than the bound's, and their median is not three times wider: footage scatters more than rows do.
     """
     error, stated = [], []
     for frequency, amplitude, found, clock in many_tones:
@@ -305,8 +305,19 @@ def test_frequency_errors_meet_the_cramer_rao_bound(many_tones):
         bound = np.sqrt(2 * 0.15 ** 2 / ((2 * np.pi * amplitude * gain) ** 2 * np.sum((times - times.mean()) ** 2)))
         error.append((found[0].frequency_hz - frequency) / bound)
         stated.append(found[0].frequency_ci_hz / 1.96 / bound)
-    assert np.sqrt(np.mean(np.square(error))) == pytest.approx(1.0, abs=0.3)
+    assert 1.4826 * np.median(np.abs(error)) == pytest.approx(1.0, abs=0.4)
     assert np.min(stated) > 0.8 and 1.0 < np.median(stated) < 3.0
+
+
+def test_amplitudes_are_not_biased(many_tones):
+    ratio = [found[0].amplitude_px / amplitude for _, amplitude, found, _ in many_tones]
+    assert np.mean(ratio) == pytest.approx(1.0, abs=0.015)
+
+
+@pytest.mark.xfail(strict=True, reason="lines of noise beside a steady tone are taken for its wander in about 6 of 100 records: "
+                   "three times the noise is exceeded by one ordinate in twenty")
+def test_a_steady_tone_does_not_wander(many_tones):
+    assert all(found[0].wander_hz == 0 for _, _, found, _ in many_tones)
 
 
 def test_noise_holds_no_tone():
@@ -350,6 +361,24 @@ def test_a_flat_broad_band_is_no_tone(low_hz, high_hz):
 
 
 # --- against Astropy -------------------------------------------------------------------------------------------------
+
+
+def test_matched_filter_against_lomb_scargle():
+    """One band, one instant a frame, even frames: at the Fourier frequencies the matched filter of the exposure clock, the
+    classical periodogram and Lomb and Scargle's (astropy) are the same number (Scargle 1982)."""
+    motion = made.tones((17.3, 0.2, 0.3), (8.1, 0.1, 1.0))
+    signals = made.row_signals(motion, made.frame_times(60, 4), 0.0, noise_px=0.05, bands=1)
+    values = signals.fast_px[..., 0]
+    # a search in steps of a quarter of 1 / duration from 4 Hz on: every fourth step is a Fourier frequency of 60 s / pairs
+    periodogram = stretch_periodogram(exposure_clock(signals, 0.0), 4.0, 29.0)
+    mid = 0.5 * (signals.time_s + signals.next_time_s)
+    own = periodogram.power(values, np.ones_like(values))
+    plain = np.abs(np.exp(-2j * np.pi * np.outer(periodogram.frequency_hz, mid)) @ values[:, 0]) ** 2 / len(values)
+    np.testing.assert_allclose(own, plain, rtol=1e-3, atol=1e-5 * plain.max())
+    series = LombScargle(mid, values[:, 0], fit_mean=False, center_data=False, normalization="psd")
+    reference = series.power(periodogram.frequency_hz, method="slow")
+    # between Fourier frequencies the two differ by the imbalance of cosines and sines, 1 in the number of cycles
+    np.testing.assert_allclose(own, reference, rtol=0.05, atol=0.01 * reference.max())
 
 
 def test_one_band_of_a_global_shutter_against_lomb_scargle():
