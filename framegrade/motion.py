@@ -36,7 +36,9 @@ LINEAR_RANGE_PX = 0.6
 #: Bands the picture is cut into; 30 bands resolve 15 cycles per frame height.
 BANDS = 30
 COLUMNS = 16
-MIN_BAND_ROWS = 8
+#: Cells of a small picture are made larger than these counts say: fewer pixels than this hold no figure.
+MIN_BAND_ROWS = 10
+MIN_COLUMN_WIDTH = 22
 #: Mean absolute difference (grey levels of 255) below which two frames or cells are the same picture again.
 SAME_PICTURE_LEVEL = 0.02
 
@@ -134,7 +136,7 @@ def make_grid(width_px: int, height_px: int, bands: int = BANDS, columns: int = 
     width, height = width_px // decimation, height_px // decimation
     margin = 2  # the derivative filter's reach
     band_rows = max(MIN_BAND_ROWS, (height - 2 * margin) // bands)
-    column_width = max(MIN_BAND_ROWS, (width - 2 * margin) // columns)
+    column_width = max(MIN_COLUMN_WIDTH, (width - 2 * margin) // columns)
     fit_bands, fit_columns = (height - 2 * margin) // band_rows, (width - 2 * margin) // column_width
     if fit_bands < 3 or fit_columns < 3:
         raise ValueError(f"a picture of {width_px} x {height_px} is too small to measure")

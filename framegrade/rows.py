@@ -204,6 +204,7 @@ def _robust_bands(values: np.ndarray, information: np.ndarray, basis: np.ndarray
     used = information[..., 0] > 0
     weight = used.astype(np.float32)
     spread = "nbk,bcik->nbci" if over == "c" else "nk,bcik->nbci"
+    scale = np.ones(len(values))
     for turn in range(4):
         normal, right = _weighted_fit(values, information, weight, basis, over)
         fit, inverse = _solve(normal, right)
