@@ -40,9 +40,10 @@ from dataclasses import dataclass
 from framegrade import isolator
 from framegrade.settings_file import Field, Settings, Table, read_settings
 
-#: Voltage of one lithium-polymer cell, while flown and fully charged (common practice). Other chemistries: give `volts`.
-CELL_NOMINAL_V = 3.7
+#: Voltage of one lithium-polymer cell fully charged, which sets the no-load limit, and its nominal voltage, which packs
+#: are sold by (common practice). Other chemistries: give `volts`.
 CELL_FULL_V = 4.2
+CELL_NOMINAL_V = 3.7
 #: Share of the no-load speed that a loaded propeller reaches at full throttle (common practice).
 LOADED_SHARE = (0.75, 0.85)
 #: Slowest share of the no-load speed taken as reachable when `idle_rpm` is not given: controllers idle at a few percent
@@ -281,7 +282,8 @@ def _check_speeds(settings: Settings, airframe: Airframe) -> None:
              if getattr(airframe, key) is not None]
     for (slow, slow_rpm), (fast, fast_rpm) in zip(given, given[1:]):
         if slow_rpm >= fast_rpm:
-            raise settings.error(f'"{fast}" = {fast_rpm:g} must be faster than "{slow}" = {slow_rpm:g}', "airframe", fast)
+            cause = f'"{fast}" = {fast_rpm:g} must be faster than "{slow}" = {slow_rpm:g}'
+            raise settings.error(cause, "airframe", fast)
     lowest = airframe.reach.lowest_rpm
     if airframe.idle_rpm is None and given and given[0][1] <= lowest:
         key, speed = given[0]

@@ -214,10 +214,25 @@ def _simulate(arguments: argparse.Namespace) -> int:
     return command.run(arguments)
 
 
+# -------------------------------------------------------------------------------------------------------------- trace
+
+def _trace_arguments(parser: argparse.ArgumentParser) -> None:
+    from framegrade import trace_command
+
+    trace_command.add_arguments(parser)
+
+
+def _trace(arguments: argparse.Namespace) -> int:
+    from framegrade import trace_command
+
+    return trace_command.run(arguments)
+
+
 COMMANDS: dict[str, Command] = {
     "grade": Command("measure clips and grade them keep, stabilise or reshoot", _grade_arguments, _grade),
     "limits": Command("print the grading limits, to copy and change", _limits_arguments, _limits),
     "simulate": Command("render flights whose motion is known, to try things out", _simulate_arguments, _simulate),
+    "trace": Command("explain tones: what turns or swings at each frequency", _trace_arguments, _trace),
 }
 
 

@@ -205,7 +205,8 @@ def grade_take(figures: dict[str, float], crop_needed_pct: float, measured_pct: 
                               f"(needs {limits.least_measured_pct:g} %)")
     verdict = judge(figures, limits)
     if verdict.component is None:
-        return None, np.nan, f"cannot be judged: no component could be measured in {_share(measured_pct)} of the picture"
+        return None, np.nan, (f"cannot be judged: no component could be measured in {_share(measured_pct)} "
+                              "of the picture")
     finding = phrase(verdict.component, verdict.figure)
     if verdict.score >= limits.usable_score:
         lead = "clean" if verdict.score >= 100 else "usable"

@@ -6,6 +6,7 @@ footage -> motion -> rows -> spectrum, path, picture -> grading -> TakeRecord
 from __future__ import annotations
 
 import os
+from collections import deque
 from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, replace
@@ -237,13 +238,23 @@ def analyse(signals: RowSignals, optics: Optics, width_px: int, rhythm: CodingRh
     rest = signals.fast_px.copy()
     # the axes are independent, and the arithmetic runs outside the interpreter's lock
     with ThreadPoolExecutor(max(1, workers)) as pool:
-        for stretch in _stretches(signals, optics.readout_s, highest):
-            work = [pool.submit(_tones_of_stretch, signals, axis, stretch, per_1920, rhythm) for axis in range(3)]
+        pending: deque = deque()
+
+        def collect() -> None:
+            stretch, work = pending.popleft()
             start, stop = float(signals.time_s[stretch.first]), float(signals.next_time_s[stretch.last - 1])
             for axis, done in enumerate(work):
                 tones, rest[stretch.first:stretch.last, :, axis] = done.result()
                 found[axis].append(tones)
                 fitted[axis] += [FittedTone(tone.lines, start, stop) for tone in tones]
+
+        for stretch in _stretches(signals, optics.readout_s, highest):
+            work = [pool.submit(_tones_of_stretch, signals, axis, stretch, per_1920, rhythm) for axis in range(3)]
+            pending.append((stretch, work))
+            if len(pending) > 2:  # a search kernel takes tens of megabytes: only a few at a time
+                collect()
+        while pending:
+            collect()
         plain = replace(signals, fast_px=rest)
         levels = list(pool.map(lambda axis: measure_levels(plain, axis, clock, highest), range(3)))
     span = float(signals.next_time_s[-1] - signals.time_s[0])

@@ -29,10 +29,10 @@ DERIVE_TAPS = np.array([0.109604, 0.276691, 0.0, -0.276691, -0.109604], np.float
 
 #: The picture is measured on a copy about this wide: sub-pixel accuracy does not gain from more, time does.
 WORKING_WIDTH_PX = 1100
-COARSE_POINTS = 160
+COARSE_POINTS = 100
 MIN_POINTS = 12
 #: A residual above this many working pixels is outside the range where one linear solve holds.
-LINEAR_RANGE_PX = 0.6
+LINEAR_RANGE_PX = 1.0
 #: Bands the picture is cut into; 30 bands resolve 15 cycles per frame height.
 BANDS = 30
 COLUMNS = 16
@@ -187,10 +187,13 @@ def coarse_warp(first: np.ndarray, second: np.ndarray, step: float) -> np.ndarra
     ndarray, shape (3, 3)
         Maps working-pixel coordinates of the first picture to the second. The identity where nothing could be tracked.
     """
-    points = cv2.goodFeaturesToTrack(first, COARSE_POINTS, 0.005, max(4, first.shape[1] // 32), blockSize=5)
+    # where to look is found on a copy half the size: four times faster, and only a choice of places
+    half = cv2.pyrDown(first)
+    points = cv2.goodFeaturesToTrack(half, COARSE_POINTS, 0.005, max(3, half.shape[1] // 32), blockSize=3)
     if points is None or len(points) < MIN_POINTS:
         return np.eye(3)
-    moved, found, _ = cv2.calcOpticalFlowPyrLK(first, second, points, None, winSize=(15, 15), maxLevel=4)
+    points *= 2
+    moved, found, _ = cv2.calcOpticalFlowPyrLK(first, second, points, None, winSize=(13, 13), maxLevel=3)
     good = found.ravel() == 1
     if good.sum() < MIN_POINTS:
         return np.eye(3)

@@ -3,9 +3,9 @@
 The frame-to-frame motion is summed to a path and split by frequency: below 0.5 Hz is travel (intended), 0.5 to 3 Hz is
 sway, above 3 Hz is shake, as a viewer of the frames sees it.
 
-The split is by zero-phase Butterworth sections over the whole record (Gustafsson 1996, "Determining the initial states in
-forward-backward filtering", IEEE Trans. Signal Process. 44(4)). A steady pan is travel whatever its speed, so the straight
-line through the path is taken off before the filters: their ends would turn part of it into sway.
+The split is by zero-phase Butterworth sections over the whole record (Gustafsson 1996, "Determining the initial states
+in forward-backward filtering", IEEE Trans. Signal Process. 44(4)). A steady pan is travel whatever its speed, so the
+straight line through the path is taken off before the filters: their ends would turn part of it into sway.
 """
 
 from __future__ import annotations

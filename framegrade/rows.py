@@ -14,7 +14,8 @@ Beaton, Tukey (1974), "The fitting of power series": the biweight that sets movi
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterable
+from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -300,21 +301,22 @@ def band_signals(pairs: Iterable[PairMotion], grid: Grid, focal_px: float, block
     ValueError
         If there is no pair.
     """
-    parts: list[RowSignals] = []
+    parts: list[tuple[Future, int, int]] = []
     held: list[PairMotion] = []
     lead = 0  # pairs at the front of `held` that an earlier block has delivered already
     reach = 0
-    for pair in pairs:
-        held.append(pair)
-        if not reach:
-            reach = slow_half_width(max(pair.next_time_s - pair.time_s, 1e-4), DRIFT_HALF_WIDTH_S)
-        if len(held) >= block + 2 * reach:
-            done = fit_block(held, grid, focal_px)
-            parts.append(cut(done, lead, len(held) - reach))
-            held = held[len(held) - 2 * reach:]
-            lead = reach
-    if len(held) > lead:
-        parts.append(cut(fit_block(held, grid, focal_px), lead, len(held)))
-    if not parts:
-        raise ValueError("no pair of frames to measure")
-    return join(parts)
+    # a block is fitted in the background while the next one's frames are being read
+    with ThreadPoolExecutor(1) as fitter:
+        for pair in pairs:
+            held.append(pair)
+            if not reach:
+                reach = slow_half_width(max(pair.next_time_s - pair.time_s, 1e-4), DRIFT_HALF_WIDTH_S)
+            if len(held) >= block + 2 * reach:
+                parts.append((fitter.submit(fit_block, held, grid, focal_px), lead, len(held) - reach))
+                held = held[len(held) - 2 * reach:]
+                lead = reach
+        if len(held) > lead:
+            parts.append((fitter.submit(fit_block, held, grid, focal_px), lead, len(held)))
+        if not parts:
+            raise ValueError("no pair of frames to measure")
+        return join([cut(done.result(), start, stop) for done, start, stop in parts])
