@@ -124,5 +124,5 @@ def from_angles(pts_s: np.ndarray, angle_px: np.ndarray, rows_per_band: int, *, 
     frames, rows = angle_px.shape
     bands = rows // rows_per_band
     mean = angle_px.reshape(frames, bands, rows_per_band).mean(2)
-    return from_differences(np.diff(mean, axis=0), pts_s, (np.arange(bands) + 0.5) / bands, noise_px=noise_px, seed=seed,
-                            axis=axis)
+    height = (np.arange(bands) + 0.5) / bands
+    return from_differences(np.diff(mean, axis=0), pts_s, height, noise_px=noise_px, seed=seed, axis=axis)

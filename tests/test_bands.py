@@ -9,10 +9,10 @@ from framegrade.spectrum.bands import band_power, third_octave_bands
 
 #: IEC 61260-1:2014 table of base-ten mid-band frequencies (five digits), beside the nominal ones of ISO 266.
 MID_HZ = {
-    3.15: 3.1623, 4.0: 3.9811, 5.0: 5.0119, 6.3: 6.3096, 8.0: 7.9433, 10.0: 10.0, 12.5: 12.589, 16.0: 15.849, 20.0: 19.953,
-    25.0: 25.119, 31.5: 31.623, 40.0: 39.811, 50.0: 50.119, 63.0: 63.096, 80.0: 79.433, 100.0: 100.0, 125.0: 125.89,
-    160.0: 158.49, 200.0: 199.53, 250.0: 251.19, 315.0: 316.23, 400.0: 398.11, 500.0: 501.19, 630.0: 630.96, 800.0: 794.33,
-    1000.0: 1000.0, 1250.0: 1258.9, 1600.0: 1584.9,
+    3.15: 3.1623, 4.0: 3.9811, 5.0: 5.0119, 6.3: 6.3096, 8.0: 7.9433, 10.0: 10.0, 12.5: 12.589, 16.0: 15.849,
+    20.0: 19.953, 25.0: 25.119, 31.5: 31.623, 40.0: 39.811, 50.0: 50.119, 63.0: 63.096, 80.0: 79.433, 100.0: 100.0,
+    125.0: 125.89, 160.0: 158.49, 200.0: 199.53, 250.0: 251.19, 315.0: 316.23, 400.0: 398.11, 500.0: 501.19, 630.0: 630.96,
+    800.0: 794.33, 1000.0: 1000.0, 1250.0: 1258.9, 1600.0: 1584.9,
 }
 
 
@@ -42,7 +42,8 @@ def test_edges():
 
 def test_only_whole_bands_below_the_limit():
     bands = third_octave_bands(158.0)
-    assert bands[-1].nominal_hz == 125.0 and bands[-1].high_hz == pytest.approx(141.25, abs=0.01)  # the 160 band ends at 177.8
+    # the 125 Hz band ends at 141.25 Hz, the next at 177.8
+    assert bands[-1].nominal_hz == 125.0 and bands[-1].high_hz == pytest.approx(141.25, abs=0.01)
     assert bands[0].nominal_hz == 3.15
     assert third_octave_bands(3.0) == ()
     edge = bands[-1].high_hz
@@ -69,7 +70,8 @@ def test_a_flat_density_gains_one_tenth_of_a_decade_a_band():
     # a property of constant-percentage bands (IEC 61260-1): white noise rises by 1 dB a one-third octave, base ten
     frequency = np.arange(1, 4000) * 0.25
     bands = third_octave_bands(900.0)
-    powers = np.array([band_power(frequency, np.ones(len(frequency)), np.ones(len(frequency), bool), b)[0] for b in bands])
+    flat, usable = np.ones(len(frequency)), np.ones(len(frequency), bool)
+    powers = np.array([band_power(frequency, flat, usable, band)[0] for band in bands])
     np.testing.assert_allclose(10 * np.diff(np.log10(powers)), 1.0, atol=1e-9)
 
 

@@ -19,7 +19,8 @@ from framegrade.grading import (
 from framegrade.settings_file import SettingsError
 
 LIMITS = Limits(
-    sway=Limit(2.0, 200.0), shake=Limit(0.1, 10.0), jello=Limit(0.1, 1.0), smear=Limit(1.0, 100.0), cadence=Limit(1.0, 100.0),
+    sway=Limit(2.0, 200.0), shake=Limit(0.1, 10.0), jello=Limit(0.1, 1.0), smear=Limit(1.0, 100.0),
+    cadence=Limit(1.0, 100.0),
     usable_score=50.0, shortest_s=1.0, keep_s=5.0, crop_pct=12.0, least_measured_pct=10.0,
 )
 CLEAN = {"sway": 1.0, "shake": 0.05, "jello": 0.02, "smear": np.nan, "cadence": 0.0}
@@ -89,7 +90,8 @@ def windows(scores, length=0.5):
 
 
 def test_runs_of_usable_windows():
-    found = usable_ranges(*windows([10, 60, 80, 70, 20, 90, 10, 55, 65]), LIMITS)  # a single window of 0.5 s is too short
+    # the single usable window of 0.5 s is too short
+    found = usable_ranges(*windows([10, 60, 80, 70, 20, 90, 10, 55, 65]), LIMITS)
     assert [(r.in_s, r.out_s) for r in found] == [(0.5, 2.0), (3.5, 4.5)]
     assert [r.score for r in found] == pytest.approx([70.0, 60.0])
 
@@ -184,10 +186,12 @@ def test_an_unknown_crop_is_never_taken_for_a_small_one():
 @pytest.mark.parametrize("figures", [{"sway": 1.5}, {"shake": 0.08}, {"jello": 0.09}, {"smear": 1.0}, {"cadence": 4.0}])
 def test_reasons_read_as_a_sentence(figures):
     component = next(iter(figures))
-    limits = Limits(**{name: Limit(getattr(LIMITS, name).clean if name == component else 1e3, 1e4) for name in COMPONENTS},
+    clean = {name: getattr(LIMITS, name).clean if name == component else 1e3 for name in COMPONENTS}
+    limits = Limits(**{name: Limit(value, 1e4) for name, value in clean.items()},
                     usable_score=0.0, shortest_s=1.0, keep_s=5.0, crop_pct=12.0, least_measured_pct=10.0)
     reason = grade_take({name: np.nan for name in COMPONENTS} | figures, 1.0, 80.0, [], 10.0, limits)[2]
-    assert re.match(r"(clean|usable): the worst is (that it (sways|shakes) |jello of |smear of |[\d.]+ % of frames )", reason)
+    worst = r"(that it (sways|shakes) |jello of |smear of |[\d.]+ % of frames )"
+    assert re.match(r"(clean|usable): the worst is " + worst, reason)
 
 
 # --- limits file -----------------------------------------------------------------------------------------------------
@@ -243,7 +247,8 @@ def test_a_mistake_is_named_with_its_line(tmp_path, table, old, new, cause):
     with pytest.raises(SettingsError) as caught:
         load_limits(path)
     message = str(caught.value)
-    expected = next(n for n, line in enumerate(text.splitlines(), 1) if line.startswith(new) and n > line_of(text, f"[{table}]"))
+    header = line_of(text, f"[{table}]")
+    expected = next(n for n, line in enumerate(text.splitlines(), 1) if n > header and line.startswith(new))
     assert f"line {expected}" in message
     assert "mine.toml" in message and cause in message and "\n" not in message
 

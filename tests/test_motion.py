@@ -1,7 +1,7 @@
-"""Cell motion on photographs moved by exactly known amounts, and on real recordings against scikit-image's registration.
+"""Cell motion on photographs moved by known amounts, and on real recordings against scikit-image's registration.
 
-Photographs are those inside the scikit-image wheel. Mirrored to a periodic picture and limited to 0.4 cycles a pixel, as
-any lens and sensor do, they can be moved by any amount without a border and without interpolation
+Photographs are those inside the scikit-image wheel. Mirrored to a periodic picture and limited to 0.4 cycles a pixel,
+as any lens and sensor do, they can be moved by any amount without a border and without interpolation
 (scipy.ndimage.fourier_shift).
 """
 
@@ -181,8 +181,11 @@ def test_unrelated_pictures_give_no_figures_to_trust():
 
 @pytest.mark.parametrize(("name", "sigma"), [("gravel", 4.0), ("gravel", 8.0), ("grass", 4.0), ("camera", 4.0)])
 def test_noise_adds_no_bias(name, sigma):
-    """Robinson and Milanfar 2004: noise in the gradients draws such estimates to zero. Slope of measured on true motion,
-    sub-pixel shifts, with noise against without: within 3 %; and without noise within 3 % of one."""
+    """Robinson and Milanfar 2004: noise in the gradients draws such estimates to zero.
+
+    Slope of measured on true motion, sub-pixel shifts, with noise against without: within 3 %; and without noise within
+    3 % of one.
+    """
     rng = np.random.default_rng(17)
     true = np.array([-0.45, -0.3, -0.15, 0.15, 0.3, 0.45])
     slopes = []
@@ -252,7 +255,8 @@ def recording(name, count):
 
 
 def registered(first, second, top, left, size):
-    """Shift (right, down) of a square by scikit-image, pre-aligned by whole pixels, and its error; None off the edge."""
+    """Shift (right, down) of a square by scikit-image, pre-aligned by whole pixels, and its error; None off the edge.
+    """
     taper = np.outer(np.hanning(size), np.hanning(size))
     moved_down = moved_right = 0
     for _ in range(3):
@@ -299,8 +303,9 @@ def test_real_recordings_against_scikit_image(name, count, size, spacing, every)
     difference = []
     for n in range(0, len(pairs), every):
         for top, left, shift in trusted_squares(frames[n], frames[n + 1], size, spacing):
-            inside = np.outer((y > top + margin) & (y < top + size - margin), (x > left + margin) & (x < left + size - margin))
-            inside &= cells(pairs[n])
+            rows = (y > top + margin) & (y < top + size - margin)
+            columns = (x > left + margin) & (x < left + size - margin)
+            inside = np.outer(rows, columns) & cells(pairs[n])
             if inside.sum() >= 3:
                 difference.append(np.hypot(*(np.median(pairs[n].flow_px[inside], axis=0) - shift)))
     assert len(difference) >= 15
@@ -311,8 +316,8 @@ def test_real_recordings_against_scikit_image(name, count, size, spacing, every)
     pytest.param("carphone_pristine", 0, range(0, 89, 4), 64, 56, id="carphone"),
     pytest.param("bikes", 45, range(70, 139, 4), 96, 88, id="bikes, second shot"),
     pytest.param("bikes", 0, range(70, 139, 4), 96, 88, id="bikes, across a cut", marks=pytest.mark.xfail(
-        strict=True, reason="hardly a cell is measured in half of all pairs, so the steady flow of the whole picture is fitted to "
-        "two or three cells and thrown off by many pixels")),
+        strict=True, reason="hardly a cell is measured in half of all pairs, so the steady flow of the whole picture "
+        "is fitted to two or three cells and thrown off by many pixels")),
 ])
 def test_whole_picture_motion_of_real_recordings(name, start, judged, size, spacing):
     """Frames whose trusted squares agree within 0.4 px move as one: the whole-picture motion is the squares' median."""

@@ -45,7 +45,9 @@ def test_split_against_fourier_masks(rate_hz):
     np.testing.assert_allclose(path.travel_px + path.sway_px + path.shake_px, position - position[0], atol=1e-9)
 
 
-@pytest.mark.parametrize(("frequency_hz", "home"), [(0.2, "travel_px"), (1.2, "sway_px"), (6.0, "shake_px"), (11.0, "shake_px")])
+@pytest.mark.parametrize(
+    ("frequency_hz", "home"), [(0.2, "travel_px"), (1.2, "sway_px"), (6.0, "shake_px"), (11.0, "shake_px")]
+)
 def test_one_frequency_goes_to_one_part(frequency_hz, home):
     time = np.arange(600) / RATE_HZ
     position = sines(time, [(frequency_hz, 10.0)])
@@ -137,7 +139,9 @@ def test_crop_of_a_known_shift():
     np.testing.assert_allclose(crop_needed_pct(shift, 1920, 1080), [10.0, 10.0, 10.0, 20.0, 10.0, 0.0])
 
 
-@pytest.mark.parametrize("deviation", [(20.0, -8.0, 0.0), (0.0, 0.0, 12.0), (30.0, 15.0, -9.0), (-5.0, 22.0, 20.0)])
+@pytest.mark.parametrize("deviation", [
+    (20.0, -8.0, 0.0), (0.0, 0.0, 12.0), (30.0, 15.0, -9.0), (-5.0, 22.0, 20.0), (60.0, 0.0, 20.0),
+])
 def test_crop_against_the_corners_of_the_turned_window(deviation):
     """The largest scale at which the window, turned and shifted the other way, has all corners inside the picture.
 

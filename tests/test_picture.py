@@ -29,11 +29,11 @@ class Clip:
         return find_cadence_faults(self.time_s, self.next_time_s, self.change_level, self.step_px)
 
 
-def make_clip(count=300, speed_px_per_s=(60.0, 20.0), shake_px=0.1, noise_level=0.6, grey_per_px=1.5, drop=(), repeat=(),
-              restamp=False, jitter_s=0.0, seed=3):
+def make_clip(count=300, speed_px_per_s=(60.0, 20.0), shake_px=0.1, noise_level=0.6, grey_per_px=1.5, drop=(),
+              repeat=(), restamp=False, jitter_s=0.0, seed=3):
     """Frames of a camera whose picture moves; `drop` and `repeat` are numbers of frames of the flawless clip.
 
-    A dropped frame is left out (with `restamp`, its gap in the timestamps too); a repeated frame shows the one before it.
+    A dropped frame is left out (with `restamp`, its gap in the timestamps too); a repeated one shows that before it.
     """
     rng = np.random.default_rng(seed)
     shown = np.arange(count) / RATE_HZ

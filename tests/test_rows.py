@@ -9,7 +9,8 @@ import pytest
 
 from framegrade.motion import PairMotion, make_grid
 from framegrade.rows import (
-    band_mean, band_signals, cut, fit_block, focal_length_px, join, remove_slow, rotation_basis, slow_half_width, slow_part,
+    band_mean, band_signals, cut, fit_block, focal_length_px, join, remove_slow, rotation_basis, slow_half_width,
+    slow_part,
 )
 
 GRID = make_grid(1280, 720)
@@ -51,6 +52,10 @@ def random_steps(pairs, seed=0, size_px=0.5, bands=GRID.bands):
     return size_px * np.random.default_rng(seed).normal(size=(pairs, bands, 3))
 
 
+def noise(rng, sigma_px, grid=GRID):
+    return sigma_px * rng.normal(size=(grid.bands, grid.columns, 2))
+
+
 def pairs_of(steps, grid=GRID):
     return [pair(n, projected_flow(step, grid)) for n, step in enumerate(steps)]
 
@@ -89,8 +94,7 @@ def test_yaw_pitch_and_roll_of_every_band():
     """Every band turned by its own angles: the fit's error is that of independent least squares on the cells' noise."""
     rng = np.random.default_rng(12)
     steps, sigma = random_steps(60), 0.01
-    flows = [pair(n, projected_flow(step) + sigma * rng.normal(size=(GRID.bands, GRID.columns, 2)), information=sigma ** -2)
-             for n, step in enumerate(steps)]
+    flows = [pair(n, projected_flow(step) + noise(rng, sigma), information=sigma ** -2) for n, step in enumerate(steps)]
     signals = fit_block(flows, GRID, FOCAL_PX)
     assert signals.fast_px.shape == (60, GRID.bands, 3)
     error = signals.fast_px - fast(steps)
@@ -109,7 +113,8 @@ def test_whole_picture_motion_and_rise():
     """The same angles in every band: the whole picture's motion, slow part included, and how far content climbs."""
     rng = np.random.default_rng(5)
     n = np.arange(100)
-    angle = np.stack([3 + 2 * np.sin(n / 25), 1.5 * np.cos(n / 17), 0.8 * np.sin(n / 11)], 1) + 0.2 * rng.normal(size=(100, 3))
+    angle = np.stack([3 + 2 * np.sin(n / 25), 1.5 * np.cos(n / 17), 0.8 * np.sin(n / 11)], 1)
+    angle += 0.2 * rng.normal(size=angle.shape)
     steps = np.broadcast_to(angle[:, None], (100, GRID.bands, 3))
     signals = fit_block(pairs_of(steps), GRID, FOCAL_PX)
     np.testing.assert_allclose(signals.whole_px, angle, atol=0.01)
@@ -122,7 +127,7 @@ def test_other_picture_sizes(width, height):
     grid, focal = make_grid(width, height), width / 1.4
     rng = np.random.default_rng(3)
     steps = random_steps(20, seed=2, size_px=width / 6400, bands=grid.bands)
-    flows = [pair(n, projected_flow(step, grid, focal) + 0.002 * rng.normal(size=(grid.bands, grid.columns, 2)), grid, 2.5e5)
+    flows = [pair(n, projected_flow(step, grid, focal) + noise(rng, 0.002, grid), grid, 2.5e5)
              for n, step in enumerate(steps)]
     found = fit_block(flows, grid, focal).fast_px
     np.testing.assert_allclose(found, fast(steps), atol=0.01)
@@ -138,7 +143,7 @@ def test_reported_variance_is_that_of_the_noise():
     """
     rng = np.random.default_rng(8)
     sigma = 0.05
-    flows = [pair(n, sigma * rng.normal(size=(GRID.bands, GRID.columns, 2)), information=sigma ** -2) for n in range(140)]
+    flows = [pair(n, noise(rng, sigma), information=sigma ** -2) for n in range(140)]
     signals = fit_block(flows, GRID, FOCAL_PX)
     empirical = signals.fast_px.var(axis=(0, 1))
     np.testing.assert_allclose(np.median(signals.variance_px2, axis=(0, 1)), empirical, rtol=0.15)
@@ -155,8 +160,8 @@ def columns(first):
 
 
 MASKING = pytest.mark.xfail(
-    strict=True, reason="least squares as the first turn of the robust fit is drawn to objects at the edge (leverage); two "
-    "turns of least absolute values before the biweight would cure it",
+    strict=True, reason="least squares as the first turn of the robust fit is drawn to objects at the edge (leverage); "
+    "two turns of least absolute values before the biweight would cure it",
 )
 
 
@@ -166,7 +171,7 @@ MASKING = pytest.mark.xfail(
     pytest.param(lambda n: columns(2), True, id="steady"),
     pytest.param(lambda n: columns((n // 30 * 3) % (GRID.columns - 3)), True, id="driving across"),
     pytest.param(lambda n: columns(0), False, id="edge", marks=MASKING),
-    pytest.param(lambda n: columns((n // 10) % (GRID.columns - 3)), False, id="driving across unsteadily", marks=MASKING),
+    pytest.param(lambda n: columns((n // 10) % (GRID.columns - 3)), False, id="across unsteadily", marks=MASKING),
 ])
 def test_moving_objects_over_a_fifth_of_the_cells(place, steady):
     """A fifth of the cells (three of sixteen columns, or scattered ones) moves on its own by up to 2.7 px a frame.
@@ -177,7 +182,7 @@ def test_moving_objects_over_a_fifth_of_the_cells(place, steady):
     sigma = 0.02
     still, crossed = [], []
     for n, step in enumerate(random_steps(60, seed=3, size_px=0.3)):
-        flow = projected_flow(step) + sigma * rng.normal(size=(GRID.bands, GRID.columns, 2))
+        flow = projected_flow(step) + noise(rng, sigma)
         still.append(pair(n, flow, information=sigma ** -2))
         across = 2.0 if steady else 1.5 + 1.2 * np.sin(0.9 * n + np.arange(GRID.bands)[:, None] / 4)
         down = 0.0 if steady else 0.7 * np.cos(1.1 * n)
@@ -224,7 +229,7 @@ def test_frozen_cells_do_not_count():
 
 
 def test_parallax_that_is_smooth_in_time_is_no_vibration():
-    """Forward flight: every cell has its own steady flow, growing towards the bottom and the sides and changing slowly."""
+    """Forward flight: every cell has its own flow, growing towards the bottom and the sides and changing slowly."""
     steps = random_steps(120, seed=9, size_px=0.3)
     x, y = np.meshgrid(GRID.x_px / 640, GRID.y_px / 360)
     flows = []
@@ -239,8 +244,8 @@ def test_parallax_that_is_smooth_in_time_is_no_vibration():
 @pytest.mark.parametrize("share", [
     pytest.param(0.7, id="mostly there"),
     pytest.param(0.1, id="mostly not", marks=pytest.mark.xfail(
-        strict=True, reason="the steady flow is fitted to cells that exist in half of all pairs, however few those are: with none "
-        "the whole picture's slow motion is lost")),
+        strict=True, reason="the steady flow is fitted to cells that exist in half of all pairs, however few those "
+        "are: with none the whole picture's slow motion is lost")),
 ])
 def test_cells_that_come_and_go_still_tell_the_pan(share):
     """A pan of 3 px a frame over sparse scenery: each cell is measured in runs of ten pairs, at `share` of the time."""
@@ -248,8 +253,9 @@ def test_cells_that_come_and_go_still_tell_the_pan(share):
     there = np.repeat(rng.uniform(size=(10, GRID.bands, GRID.columns)) < share, 10, axis=0)
     flows = []
     for n in range(100):
-        p = pair(n, projected_flow([3.0, 0.5, 0.0]) + 0.01 * rng.normal(size=(GRID.bands, GRID.columns, 2)), information=1e4)
-        flows.append(replace(p, information=p.information * there[n][..., None], flow_px=p.flow_px * there[n][..., None]))
+        p = pair(n, projected_flow([3.0, 0.5, 0.0]) + noise(rng, 0.01), information=1e4)
+        mask = there[n][..., None]
+        flows.append(replace(p, information=p.information * mask, flow_px=p.flow_px * mask))
     signals = fit_block(flows, GRID, FOCAL_PX)
     assert np.abs(signals.whole_px - [3.0, 0.5, 0.0]).max() < 0.1
 
@@ -264,7 +270,7 @@ def test_seams_of_blocks_do_not_show():
     n = np.arange(420)
     slow = np.stack([4 * np.sin(n / 40), 2 * np.cos(n / 31), np.sin(n / 23)], 1)
     steps = random_steps(420, seed=4, size_px=0.3, bands=grid.bands) + slow[:, None]
-    flows = [pair(n, projected_flow(step, grid) + 0.01 * rng.normal(size=(grid.bands, grid.columns, 2)), grid, 1e4)
+    flows = [pair(n, projected_flow(step, grid) + noise(rng, 0.01, grid), grid, 1e4)
              for n, step in enumerate(steps)]
     whole = fit_block(flows, grid, FOCAL_PX)
     blocks = band_signals(iter(flows), grid, FOCAL_PX, block=64)
@@ -304,7 +310,8 @@ def test_band_mean():
 
 
 def local_quadratic(values, valid, half_width):
-    """Independent: numpy.polyfit of degree 2 around every sample, Hann weights that end one sample beyond the window."""
+    """Independent: numpy.polyfit of degree 2 around every sample; Hann weights that end one sample beyond the window.
+    """
     count = len(values)
     window = np.hanning(2 * half_width + 3)[1:-1]
     out = np.empty(count)

@@ -1,4 +1,4 @@
-"""From spectrum to picture, checked against scipy, against Legendre projection by numpy, and by brute-force averages."""
+"""From spectrum to picture, checked against scipy, against Legendre projection by numpy, and by brute force."""
 
 from __future__ import annotations
 
@@ -80,9 +80,11 @@ def test_shake_share_is_the_mean_over_the_rows():
         assert screen.jello_share(frequency, READOUT_S) == pytest.approx(np.mean(rest ** 2) / 0.5, rel=1e-6)
 
 
-@pytest.mark.parametrize(("frequency_hz", "exposure_s"), [(137.3, 0.004), (137.3, 0.016), (60.0, 1 / 60), (500.0, 0.0005)])
+@pytest.mark.parametrize(
+    ("frequency_hz", "exposure_s"), [(137.3, 0.004), (137.3, 0.016), (60.0, 1 / 60), (500.0, 0.0005)]
+)
 def test_exposure_by_averaging(frequency_hz, exposure_s):
-    """Brute force: a complex sinusoid averaged over a box of the exposure's length keeps |sinc(f e)| of its amplitude."""
+    """Brute force: a complex sinusoid averaged over the exposure keeps |sinc(f e)| of its amplitude."""
     inside = ((np.arange(200_000) + 0.5) / 200_000 - 0.5) * exposure_s
     expected = abs(np.mean(np.exp(2j * np.pi * frequency_hz * inside)))
     assert screen.exposure_gain(frequency_hz, exposure_s) == pytest.approx(expected, abs=1e-8)
@@ -99,9 +101,12 @@ def test_vibration_smear_by_brute_force():
     exposure = 0.005
     frequency, amplitude = np.array([60.0, 137.3]), np.array([0.8, 0.5])
     t = np.linspace(0, 40, 1_000_001)
-    x = (amplitude[:, None] * np.cos(2 * np.pi * frequency[:, None] * t + np.array([[0.2], [1.7]]))).sum(0)
-    later = (amplitude[:, None] * np.cos(2 * np.pi * frequency[:, None] * (t + exposure) + np.array([[0.2], [1.7]]))).sum(0)
-    expected = np.sqrt(np.mean((later - x) ** 2))
+    start = np.array([[0.2], [1.7]])
+
+    def position(time):
+        return (amplitude[:, None] * np.cos(2 * np.pi * frequency[:, None] * time + start)).sum(0)
+
+    expected = np.sqrt(np.mean((position(t + exposure) - position(t)) ** 2))
     assert screen.vibration_smear_px(frequency, amplitude ** 2 / 2, exposure) == pytest.approx(expected, rel=1e-4)
 
 
@@ -111,7 +116,7 @@ def test_smear_of_steady_motion():
 
 @pytest.mark.parametrize(("width", "height"), [(1280, 720), (1920, 1080), (640, 640)])
 def test_axis_weights_by_the_mean_over_the_picture(width, height):
-    """Brute force: mean square displacement of every pixel for a small rotation that moves the mid-edge by one pixel."""
+    """Brute force: mean square displacement of every pixel when a small roll moves the mid-edge by one pixel."""
     x = np.arange(width) + 0.5 - width / 2
     y = np.arange(height) + 0.5 - height / 2
     angle = 1 / (width / 2)

@@ -45,7 +45,8 @@ def levels_in(signals, readout_s, axis=0):
 
 
 def test_the_clock_of_a_known_camera():
-    # Davis and others 2014, The Visual Microphone: 1280 x 720 at 60 frames/s, 16 us a row: about 30 % of samples missing
+    # Davis and others 2014, The Visual Microphone: 1280 x 720 at 60 frames/s, 16 us a row: about 30 % of samples
+    # are missing
     readout = 720 * 16e-6
     signals = made.row_signals(made.still, made.frame_times(60, 1), readout, bands=720)
     clock = exposure_clock(signals, readout)
@@ -60,7 +61,8 @@ def test_the_clock_of_a_known_camera():
 def test_response_by_brute_force(frequency_hz):
     """The response to exp(2 pi i f t) is what the signals of a cosine and of a sine hold, high-pass included."""
     times = made.frame_times(60, 1.5)
-    cosine, sine = (made.row_signals(made.tone(frequency_hz, 1.0, phase), times, READOUT_S) for phase in (0.0, -np.pi / 2))
+    cosine, sine = (made.row_signals(made.tone(frequency_hz, 1.0, phase), times, READOUT_S)
+                    for phase in (0.0, -np.pi / 2))
     seen = cosine.fast_px[..., 0] + 1j * sine.fast_px[..., 0]
     np.testing.assert_allclose(difference_response(frequency_hz, exposure_clock(cosine, READOUT_S)), seen, atol=2e-4)
 
@@ -181,9 +183,11 @@ def test_four_steady_motors():
 def test_four_wandering_motors_of_the_simulator():
     """Rotors of the simulator on yaw: summed power and power-weighted frequency against its truth file's facts."""
     flight = flight_from_dict({
-        "seed": 5, "camera": {"width_px": 1280, "height_px": 720, "frame_rate": 60, "readout_ms": 14.0, "exposure_ms": 0.5},
+        "seed": 5,
+        "camera": {"width_px": 1280, "height_px": 720, "frame_rate": 60, "readout_ms": 14.0, "exposure_ms": 0.5},
         "flight": {"duration_s": 4.0},
-        "motors": [{"count": 4, "axis": "yaw", "frequency_hz": 140.0, "spread_pct": 2.0, "wander_pct": 0.4, "amplitude_px": 0.3}],
+        "motors": [{"count": 4, "axis": "yaw", "frequency_hz": 140.0, "spread_pct": 2.0, "wander_pct": 0.4,
+                    "amplitude_px": 0.3}],
     })
     times, _, angle = simulated_rows(flight, 30 * 4)
     signals = made.from_angles(times, angle[..., 0] * flight.camera.focal_px, 4, noise_px=0.03)
@@ -194,7 +198,8 @@ def test_four_wandering_motors_of_the_simulator():
     found = [t for t in tones_in(signals, READOUT_S) if 130 < t.frequency_hz < 150]
     total = sum(t.amplitude_px ** 2 / 2 for t in found)
     assert 10 * np.log10(total / power) == pytest.approx(0, abs=0.5)
-    assert np.average([t.frequency_hz for t in found], weights=[t.amplitude_px ** 2 for t in found]) == pytest.approx(mean, abs=0.5)
+    middle = np.average([t.frequency_hz for t in found], weights=[t.amplitude_px ** 2 for t in found])
+    assert middle == pytest.approx(mean, abs=0.5)
 
 
 def test_a_global_shutter_sees_up_to_half_the_frame_rate():
@@ -205,8 +210,8 @@ def test_a_global_shutter_sees_up_to_half_the_frame_rate():
 
 
 @pytest.mark.parametrize("kind", ["doubled intervals", "jittered", pytest.param("three two", marks=pytest.mark.xfail(
-    strict=True, reason="the search's matched filter takes every pair's gain for the same, but sin(pi f T) changes its sign "
-    "between intervals of 20 and 13.3 ms: the kernel needs that factor pair by pair"))])
+    strict=True, reason="the search's matched filter takes every pair's gain for the same, but sin(pi f T) changes its "
+    "sign between intervals of 20 and 13.3 ms: the kernel needs that factor pair by pair"))])
 def test_variable_frame_rate(kind):
     rng = np.random.default_rng(2)
     if kind == "doubled intervals":
@@ -295,8 +300,9 @@ def test_intervals_hold_the_truth(many_tones):
 def test_frequency_errors_meet_the_cramer_rao_bound(many_tones):
     """Rife and Boorstyn 1974: var(f) >= 2 s^2 / ((2 pi A g)^2 sum (t - mean)^2), g the gain of the frame difference.
 
-    Errors over the bound's deviation, by their median (1.4826 of it for normal numbers), are near 1. The reported intervals
-    are never narrower than the bound's, and their median is not three times wider: footage scatters more than rows do.
+    Errors over the bound's deviation, by their median (1.4826 of it for normal numbers), are near 1. The reported
+    intervals are never narrower than the bound's, and their median is not three times wider: footage scatters more than
+    rows do.
     """
     error, stated = [], []
     for frequency, amplitude, found, clock in many_tones:
@@ -314,8 +320,8 @@ def test_amplitudes_are_not_biased(many_tones):
     assert np.mean(ratio) == pytest.approx(1.0, abs=0.015)
 
 
-@pytest.mark.xfail(strict=True, reason="lines of noise beside a steady tone are taken for its wander in about 6 of 100 records: "
-                   "three times the noise is exceeded by one ordinate in twenty")
+@pytest.mark.xfail(strict=True, reason="lines of noise beside a steady tone are taken for its wander in about 6 of 100 "
+                   "records: three times the noise is exceeded by one ordinate in twenty")
 def test_a_steady_tone_does_not_wander(many_tones):
     assert all(found[0].wander_hz == 0 for _, _, found, _ in many_tones)
 
@@ -350,13 +356,14 @@ def test_detection_ratio_tends_to_scargle():
     assert detection_ratio(1000, 0.01, 1e7) == pytest.approx(np.log(1000 / 0.01), rel=1e-5)
 
 
-@pytest.mark.xfail(strict=True, reason="the hump rule compares power that dips in the blind intervals and in the clock's own "
-                   "side lobes; on power / gain^2 over the seen cells only, broad bands stay below 5 and wandering tones above 10")
+@pytest.mark.xfail(strict=True, reason="the hump rule compares power that dips in the blind intervals and in the "
+                   "clock's own side lobes; on power / gain^2 over the seen cells only, broad bands stay below 5 and "
+                   "wandering tones above 10")
 @pytest.mark.parametrize(("low_hz", "high_hz"), [(80.0, 160.0), (20.0, 400.0)])
 def test_a_flat_broad_band_is_no_tone(low_hz, high_hz):
     times = made.frame_times(60, 2)
-    records = [made.row_signals(made.broadband(low_hz, high_hz, 0.5, seed=seed), times, READOUT_S, noise_px=0.05, seed=seed,
-                                bands=20) for seed in range(3)]
+    records = [made.row_signals(made.broadband(low_hz, high_hz, 0.5, seed=seed), times, READOUT_S, noise_px=0.05,
+                                seed=seed, bands=20) for seed in range(3)]
     assert sum(bool(tones_in(record, READOUT_S)) for record in records) == 0
 
 
@@ -364,12 +371,11 @@ def test_a_flat_broad_band_is_no_tone(low_hz, high_hz):
 
 
 def test_matched_filter_against_lomb_scargle():
-    """One band, one instant a frame, even frames: at the Fourier frequencies the matched filter of the exposure clock, the
-    classical periodogram and Lomb and Scargle's (astropy) are the same number (Scargle 1982)."""
+    """One band, one instant a frame, even frames: the exposure clock's matched filter is the classical periodogram, and
+    at the Fourier frequencies that of Lomb and Scargle (astropy) too (Scargle 1982)."""
     motion = made.tones((17.3, 0.2, 0.3), (8.1, 0.1, 1.0))
     signals = made.row_signals(motion, made.frame_times(60, 4), 0.0, noise_px=0.05, bands=1)
     values = signals.fast_px[..., 0]
-    # a search in steps of a quarter of 1 / duration from 4 Hz on: every fourth step is a Fourier frequency of 60 s / pairs
     periodogram = stretch_periodogram(exposure_clock(signals, 0.0), 4.0, 29.0)
     mid = 0.5 * (signals.time_s + signals.next_time_s)
     own = periodogram.power(values, np.ones_like(values))
@@ -404,7 +410,8 @@ def test_rows_as_uneven_samples_against_lomb_scargle():
     times = made.frame_times(60, 3)
     signals = made.row_signals(made.tones((137.3, 0.45, 0.3), (251.0, 0.15, 1.0)), times, READOUT_S, noise_px=0.03)
     mid = (signals.time_s + signals.next_time_s)[:, None] / 2 + (signals.height - 0.5) * READOUT_S
-    series = LombScargle(mid.ravel(), signals.fast_px[..., 0].ravel(), fit_mean=False, center_data=False, normalization="psd")
+    series = LombScargle(mid.ravel(), signals.fast_px[..., 0].ravel(), fit_mean=False, center_data=False,
+                         normalization="psd")
     found = tones_in(signals, READOUT_S)
     whole = np.arange(4, 500, 0.1)
     assert whole[np.argmax(series.power(whole))] == pytest.approx(found[0].frequency_hz, abs=0.1)
@@ -436,7 +443,8 @@ def test_broadband_levels(rate_hz, readout_s, duration_s):
         band = next(band for band in third_octave_bands(500) if band.nominal_hz == nominal)
         power, seen = band_power(levels.frequency_hz, levels.density, levels.observable, band)
         assert seen > 0.5
-        assert 10 * np.log10(power / (true_density * (band.high_hz - band.low_hz) * seen)) == pytest.approx(0, abs=1.5), nominal
+        true_power = true_density * (band.high_hz - band.low_hz) * seen
+        assert 10 * np.log10(power / true_power) == pytest.approx(0, abs=1.5), nominal
     for low, high in ((10, 55), (200, 290), (310, 400)):
         beside = levels.observable & (levels.frequency_hz > low) & (levels.frequency_hz < high)
         assert levels.density[beside].mean() < 0.05 * true_density, (low, high)
@@ -522,8 +530,8 @@ def test_levels_follow_time():
 @pytest.mark.parametrize(("frequency_hz", "rate_hz", "readout_s"), [
     (137.3, 60, 0.014), (96.1, 60, 0.010),
     pytest.param(137.3, 30, 0.022, marks=pytest.mark.xfail(
-        strict=True, reason="the fitted wave does not pass the high-pass that the data passed: what it leaves at the ends of "
-        "the record is found again, near the blind interval, as weak tones")),
+        strict=True, reason="the fitted wave does not pass the high-pass that the data passed: what it leaves at the "
+        "ends of the record is found again, near the blind interval, as weak tones")),
 ])
 def test_without_a_readout_the_candidates_hold_the_truth(frequency_hz, rate_hz, readout_s):
     signals = made.row_signals(made.tone(frequency_hz, 0.4), made.frame_times(rate_hz, 3), readout_s, noise_px=0.03)
