@@ -165,6 +165,15 @@ class Airframe:
         return self.kv_rpm_per_volt * self.volts
 
     @property
+    def doubt(self) -> str | None:
+        """A sentence when the voltage looks like what packs are sold by, not what they have fully charged."""
+        cells = round(self.volts / CELL_NOMINAL_V)
+        if cells < 2 or abs(self.volts - cells * CELL_NOMINAL_V) > 0.01:
+            return None
+        return (f"{self.volts:g} V is the nominal voltage of {cells} lithium-polymer cells; fully charged they have "
+                f"{cells * CELL_FULL_V:.1f} V: if so, write cells = {cells}, or the fastest speeds are missed")
+
+    @property
     def pole_pairs(self) -> int | None:
         """Electrical turns for each turn of the shaft."""
         return None if self.magnet_poles is None else self.magnet_poles // 2

@@ -195,7 +195,7 @@ def trace_json(graded: GradeRun, airframe: Airframe, traced: Sequence[TakeTrace]
     reach = airframe.reach
     return json_text({
         "schema": SCHEMA, "program": PROGRAM, "out": graded.out,
-        "airframe": _written({**dataclasses.asdict(airframe), "lowest_rpm": reach.lowest_rpm,
+        "airframe": _written({**dataclasses.asdict(airframe), "doubt": airframe.doubt, "lowest_rpm": reach.lowest_rpm,
                               "highest_rpm": reach.highest_rpm}),
         "takes": [_written(dataclasses.asdict(take)) for take in traced],
         "failed": failed, "cautions": GROUND_RUN_CAUTIONS,
@@ -238,6 +238,8 @@ def report_lines(traced: Sequence[TakeTrace], airframe: Airframe, width: int) ->
     """
     yield from _wrapped(f"{displayable(airframe.name or 'aircraft')}: {_count(airframe.motors, 'motor')}, "
                         f"{_count(airframe.blades, 'blade')}; shafts reach {airframe.reach.words()}", 0, width)
+    if airframe.doubt:
+        yield from _wrapped(airframe.doubt, 0, width)
     for take in traced:
         yield Text("")
         yield Text(displayable(take.clip), "bold")

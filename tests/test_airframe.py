@@ -54,7 +54,16 @@ def test_no_load_limit(tmp_path):
     made = load_airframe(written(tmp_path, WHOLE))
     assert made.volts == pytest.approx(16.8)
     assert made.no_load_rpm == pytest.approx(16_800)
-    assert load_airframe(written(tmp_path, WHOLE.replace("cells = 4", "volts = 14.8"))).no_load_rpm == pytest.approx(14_800)
+    given = load_airframe(written(tmp_path, WHOLE.replace("cells = 4", "volts = 14.6")))
+    assert given.no_load_rpm == pytest.approx(14_600)
+
+
+def test_nominal_voltage_is_doubted(tmp_path):
+    """Packs are sold by 3.7 V a cell and charge to 4.2 V (common practice): 14.8 V is most likely four cells."""
+    doubt = load_airframe(written(tmp_path, WHOLE.replace("cells = 4", "volts = 14.8"))).doubt
+    assert "4 lithium-polymer cells" in doubt and "16.8 V" in doubt and "cells = 4" in doubt
+    for text in (WHOLE, WHOLE.replace("cells = 4", "volts = 14.6"), WHOLE.replace("cells = 4", "volts = 25.2")):
+        assert load_airframe(written(tmp_path, text)).doubt is None
 
 
 def test_isolator_frequency(tmp_path):

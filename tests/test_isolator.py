@@ -41,7 +41,7 @@ def test_sag_inverse(frequency):
 
 
 def test_transmissibility_example():
-    """Isolator selection example (ASHRAE Applications, ISO 2017-1): sag 25.0 mm, 25 Hz, z = 0.05: r = 7.93, T = 0.0206."""
+    """Isolator selection example (ASHRAE Applications, ISO 2017-1): 25.0 mm, 25 Hz, z = 0.05: r = 7.93, T = 0.0206."""
     natural = isolator.natural_frequency_from_sag(25.0)
     assert 25.0 / natural == pytest.approx(7.93, abs=0.005)
     assert isolator.transmissibility(25.0, natural, 0.05) == pytest.approx(0.0206, abs=0.00005)
@@ -93,7 +93,7 @@ def test_isolation_db():
 
 
 def test_permissible_unbalance_example():
-    """ISO 21940-11 (formerly ISO 1940-1), worked example of a machine-tool catalogue: G 6.3, 2 kg, 10 000 rpm: 12 g mm."""
+    """ISO 21940-11 (formerly ISO 1940-1), worked example of a catalogue: G 6.3, 2 kg, 10 000 rpm: 12 g mm."""
     assert isolator.permissible_unbalance_g_mm(6.3, 2.0, 10_000) == pytest.approx(12.0, abs=0.05)
     assert isolator.permissible_unbalance_g_mm(6.3, 2.0, 10_000) == pytest.approx(9549 * 6.3 * 2.0 / 10_000, rel=5e-5)
 

@@ -63,14 +63,15 @@ def simulated(tones, duration_s=5.0, noise_px=0.03):
     """Yaw band signals of a simulated flight and the flight."""
     flight = flight_from_dict({
         "seed": 5, "flight": {"duration_s": duration_s}, "tone": tones,
-        "camera": {"width_px": 1280, "height_px": 720, "frame_rate": 60, "readout_ms": 1e3 * READOUT_S, "exposure_ms": 0.0},
+        "camera": {"width_px": 1280, "height_px": 720, "frame_rate": 60, "readout_ms": 1e3 * READOUT_S,
+                   "exposure_ms": 0.0},
     })
     pts, _, angle = row_signals(flight, 60)
     return made.from_angles(pts, angle[..., 0] * flight.camera.focal_px, 2, noise_px=noise_px), flight
 
 
 def test_track_follows_the_simulator():
-    """A tone whose speed wanders by several percent, and a steady one, against the simulator's instantaneous frequency."""
+    """A tone whose speed wanders by several percent, and a steady one, against the simulator's own frequencies."""
     signals, flight = simulated([
         {"axis": "yaw", "frequency_hz": 150.0, "amplitude_px": 0.6, "wander_pct": 6.0, "wander_time_s": 6.0},
         {"axis": "yaw", "frequency_hz": 41.0, "amplitude_px": 0.5},
@@ -132,9 +133,10 @@ def test_best_path_is_the_best():
         worth, glide = rng.normal(size=(4, 5)), 0.02 * rng.normal(size=(4, 5))
 
         def total(path):
-            bends = [abs((b - a) * 0.0025 - 0.25 * (glide[w, a] + glide[w + 1, b]) / 2) / 0.02
+            bends = [abs((b - a) * 0.0025 - 0.25 * (glide[w, a] + glide[w + 1, b]) / 2)
                      for w, (a, b) in enumerate(zip(path, path[1:]))]
-            return sum(worth[w, j] for w, j in enumerate(path)) - sum(bends)
+            length = sum(abs(b - a) for a, b in zip(path, path[1:])) * 0.0025
+            return sum(worth[w, j] for w, j in enumerate(path)) - sum(bends) / 0.02 - length / 0.05
 
         best = max(itertools.product(range(5), repeat=4), key=total)
         assert best_path(worth, glide, 0.25).tolist() == list(best)
@@ -183,7 +185,7 @@ def test_weak_or_short_tracks_do_not_set_the_reference():
 
 
 def test_resonance_passed_by_a_shaft():
-    """Unbalance grows with the square of speed and swells where the isolator's transmissibility peaks (Harris, ch. 30)."""
+    """Unbalance grows with speed squared and swells where an isolator's transmissibility peaks (Harris, ch. 30)."""
     amplitude = (RAMP / 100) ** 2 * transmissibility(RAMP, 122.0, 0.03)
     assert passed_resonance(track_of(RAMP, amplitude)) == pytest.approx(122.0, rel=0.04)
     assert passed_resonance(track_of(RAMP, (RAMP / 100) ** 2)) is None
@@ -345,7 +347,7 @@ def folded_take(*tones, readout_s=READOUT_S, rate=60.0):
 
 
 def test_unknown_readout_is_implied():
-    """A shaft's family picks its frequencies among their aliases, and so the readout; but it is never more than likely."""
+    """A shaft's family picks its frequencies among their aliases, and so the readout; it is never more than likely."""
     record = folded_take(("yaw", 137.3, 0.5), ("pitch", 274.6, 0.2))
     assert len(record.extra["candidates"][0]["candidates_hz"]) > 3
     traced = trace_take(record, QUAD)
@@ -358,7 +360,7 @@ def test_unknown_readout_is_implied():
 
 
 def test_unknown_readout_out_of_reach():
-    """Candidates no shaft can turn at are filtered out: with a full speed of 60 turns/s, 137.3 Hz is no once per turn."""
+    """Candidates no shaft can turn at are filtered out: at a full speed of 60 turns/s 137.3 Hz is no once per turn."""
     airframe = dataclasses.replace(QUAD, idle_rpm=1200, hover_rpm=2700, full_rpm=3600)
     tone = only(trace_take(folded_take(("yaw", 137.3, 0.5)), airframe))
     assert all(20 <= c.frequency_hz / c.order <= 60 for c in tone.candidates if c.order)
@@ -380,7 +382,8 @@ def test_global_shutter_claims_little():
 def throttled_take():
     tracks = (track_of(RAMP), track_of(3 * RAMP, 0.2, axis=1), track_of(48.0, 0.3, axis=2))
     # what a gliding shaft leaves in the table of tones: smears along its way, here near hover and at a wrong place
-    return take(("yaw", 104.0, 0.3), ("yaw", 131.0, 0.3), ("roll", 48.0, 0.3), extra={"tracks": tracks_to_extra(tracks)})
+    return take(("yaw", 104.0, 0.3), ("yaw", 131.0, 0.3), ("roll", 48.0, 0.3),
+                extra={"tracks": tracks_to_extra(tracks)})
 
 
 def test_throttle_change_names_turning_and_resonance():
@@ -463,7 +466,7 @@ def test_command(tmp_path, airframe_file, capsys):
     assert "once per turn, 8238 rpm" in text and "blade pass or twice per turn (2 per turn), 8238 rpm" in text
     assert "slow oscillation" in text and "unexplained" in text
     # the cautions for ground runs with propellers
-    for words in ("tie the aircraft down", "eye protection", "Take the propellers off", "local rules", "out of the prop"):
+    for words in ("tie the aircraft down", "eye protection", "Take the propellers off", "local rules", "hands, hair"):
         assert words in text
     assert "G 6.3 (ISO 21940-11) leaves 0.21 g mm" in text  # 9549 x 6.3 x 0.042 / 11800
     assert shown.err == ""

@@ -37,9 +37,9 @@ MOTOR_SPREADS = (0.012, 0.045)
 #: Lines of other motors near an order, for each further motor, as a share of the order's own; of once per turn and of
 #: the higher orders, which other motors show less often than their unbalance.
 OTHER_MOTORS_ONCE, OTHER_MOTORS_HIGHER, MOST_OTHER_MOTORS = 0.3, 0.15, 3
-#: Standard deviations (logarithm) of the speed in a take around a known hover speed, in flight and on the ground or under
-#: full power, and how often; and around the usual share of full speed where hover is not known. The rest of the belief is
-#: spread evenly over the reachable range.
+#: Standard deviations (logarithm) of the speed in a take around a known hover speed, in flight and on the ground or
+#: under full power, and how often; and around the usual share of full speed where hover is not known. The rest of the
+#: belief is spread evenly over the reachable range.
 HOVER_SPREADS = ((0.15, 0.75), (0.45, 0.2))
 USUAL_SHARE_OF_FULL, USUAL_SPREADS = 0.62, ((0.35, 0.8),)
 #: A speed beyond what a loaded propeller reaches, though below the no-load limit, is this much less likely.
@@ -48,8 +48,8 @@ BEYOND_LOADED = 0.2
 #: unbalance tends to be the strongest line, harmonics and lines without a cause in the file are rather weak, resonances
 #: are any.
 STRENGTH_ONCE, STRENGTH_HIGHER, STRENGTH_OTHER = 1.5, 0.8, 0.6
-#: How much less likely a cause is that ought to do the other thing while the throttle changes: a resonance that follows,
-#: an order that stays (one motor may stay while others change), a resonance that drifts.
+#: How much less likely a cause is that ought to do the other thing while the throttle changes: a resonance that
+#: follows, an order that stays (one motor may stay while others change), a resonance that drifts.
 FOLLOWING_SWING, STAYING_ORDER, DRIFTING_SWING = 0.02, 0.1, 0.2
 
 

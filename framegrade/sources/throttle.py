@@ -16,8 +16,8 @@ from scipy.stats import siegelslopes
 from framegrade.sources.causes import SLOW_HIGH_HZ
 from framegrade.spectrum.tracks import Track
 
-#: The throttle changes when the middle 80 % of a track's frequencies span this much (relative), and a track stays when its
-#: own span less: propellers in steady flight wander by one or two percent.
+#: The throttle changes when the middle 80 % of a track's frequencies span this much (relative), and a track stays when
+#: its own span less: propellers in steady flight wander by one or two percent.
 LEAST_MOVE, MOST_STAY = 0.06, 0.03
 #: The track that shows it is seen in this share of all windows, this strong beside the strongest: beats of two motors
 #: close to each other make short and weak tracks that wander.

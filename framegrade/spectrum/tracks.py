@@ -35,13 +35,16 @@ LOWEST_HZ, HIGHEST_HZ = 12.0, 600.0
 #: Relative frequency step of the search, and the relative glides tried, per second.
 STEP = 0.0025
 GLIDES_PER_S = np.linspace(-0.4, 0.4, 9)
-#: A path that departs from its own glide by this share of its frequency pays as much as a window's evidence e-fold.
-WORTH_OF_BEND = 0.02
+#: A path that departs from its own glide by this share of its frequency from window to window pays one e-fold of evidence;
+#: and so does one that moves by the other: where nothing is seen any glide fits, and paths must not stroll for nothing.
+WORTH_OF_BEND, WORTH_OF_MOVE = 0.02, 0.05
 #: A step from window to window lies between what both windows' glides make, within this: error of a window's frequency,
 #: error of a glide per second, and the longest gap that is bridged.
-GLIDE_SLACK_HZ, BEND_SLACK, LONGEST_GAP_S = 0.8, 0.03, 1.0
+GLIDE_SLACK_HZ, BEND_SLACK, LONGEST_GAP_S = 0.8, 0.03, 2.0
 #: Of a frequency and its aliases only the strongest is looked at; others must come within this share of its power.
 ALIAS_MARGIN = 0.97
+#: Beside a tone, this near (relative), what is weaker than this share of it is taken for its skirt.
+SKIRT_WIDTH, SKIRT_SHARE = 0.1, 0.12
 MOST_TRACKS = 4
 #: A track must be seen in this many windows, and in this share of all.
 LEAST_WINDOWS, LEAST_SHARE = 4, 0.3
@@ -325,6 +328,9 @@ def _without_traces(evidence: _Evidence, found: list[Track], grid: np.ndarray, c
             steps, image = (grid - f) / half_rate, (grid + f) / half_rate
             near = (np.abs(steps - np.round(steps)) < width) | (np.abs(image - np.round(image)) < width)
             mask = near & (evidence.amplitude_px[w] < CODING_TRACE * track.amplitude_px[w])
+            # what wobbles within a window leaves a skirt
+            skirt = np.abs(grid - f) < SKIRT_WIDTH * f
+            mask |= skirt & (evidence.amplitude_px[w] < SKIRT_SHARE * track.amplitude_px[w])
             ratio[w, mask] = np.minimum(ratio[w, mask], 1.0)
     return ratio
 
@@ -386,7 +392,7 @@ def best_path(worth: np.ndarray, glide_per_s: np.ndarray, hop_s: float, step: fl
     Notes
     -----
     Forney 1973: the best path to each state of a window from the best paths to the window before. A move costs its
-    departure from the mean of both glides, in units of `WORTH_OF_BEND`.
+    departure from the mean of both glides in units of `WORTH_OF_BEND`, and its length in units of `WORTH_OF_MOVE`.
     """
     count, width = worth.shape
     reach = int(np.ceil(hop_s * np.abs(GLIDES_PER_S).max() / step)) + 2
@@ -397,7 +403,7 @@ def best_path(worth: np.ndarray, glide_per_s: np.ndarray, hop_s: float, step: fl
     source = np.clip(source, 0, width - 1)
     for w in range(1, count):
         glide = 0.5 * hop_s * (glide_per_s[w - 1][source] + glide_per_s[w][None, :])
-        cost = np.abs(moves[:, None] * step - glide) / WORTH_OF_BEND
+        cost = np.abs(moves[:, None] * step - glide) / WORTH_OF_BEND + np.abs(moves[:, None]) * step / WORTH_OF_MOVE
         total = np.where(outside, -np.inf, best[source] - cost)
         choice = np.argmax(total, axis=0)
         came[w] = source[choice, np.arange(width)]

@@ -488,8 +488,8 @@ def main() -> None:
         table.round(4).to_csv(HERE / "trace.csv", index=False)
         (HERE / "trace.md").write_text(
             "# Tracing campaign, latest result\n\nMade by `python -m tests.bench.trace`: simulated airframes of 2 to 4 "
-            "blades and 1 to 8 motors in flight and on the ground; a row of trace.csv is a traced tone.\n\n" + text + "\n",
-            encoding="utf-8")
+            "blades and 1 to 8 motors, in flight and on the ground; a row of trace.csv is a traced tone.\n\n"
+            f"{text}\n", encoding="utf-8")
 
 
 if __name__ == "__main__":
