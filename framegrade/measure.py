@@ -34,7 +34,7 @@ from framegrade.rows import (
 from framegrade.spectrum.bands import band_power, third_octave_bands
 from framegrade.spectrum.folded import FoldedTone, find_folded_tones, fold
 from framegrade.spectrum.levels import FittedTone, Levels, add_tones, bridged, measure_levels
-from framegrade.spectrum.response import SLOWEST_ALIAS_HZ, Clock, exposure_clock, highest_frequency_hz
+from framegrade.spectrum.response import Clock, blind_half_width_hz, exposure_clock, highest_frequency_hz
 from framegrade.spectrum.tones import LEAST_TONE_PX1920, Periodogram, Tone, axis_data, find_tones, stretch_periodogram
 
 SHORTEST_CLIP_S = 1.0
@@ -553,6 +553,8 @@ def _record(info, optics, limits, signals, path, cadence, vibration, jello, resi
     figures = _figures(info, optics, path, cadence, vibration, jello_px, slice(None), slice(None))
     ranges = grading.usable_ranges(windows["start_s"].to_numpy(), windows["end_s"].to_numpy(), windows["score"].to_numpy(float), limits)
     grade, score, reason = grading.grade_take(figures, crop, measured, ranges, duration, limits)
+    if below_floor:
+        reason = reason.replace("jello of ", "jello of at most ")
     judged = grade is not None
     tones, spectrum = tone_table(clip, info, optics, vibration), spectrum_table(clip, info, optics, vibration)
     strongest = vibration.tones[0] if vibration.tones else vibration.folded[0] if vibration.folded else None
@@ -607,8 +609,8 @@ def _notes(info, optics, signals, cadence, vibration, jello, below_floor) -> lis
         notes.append("global shutter: vibration shows only folded below half the frame rate, so tones have candidate "
                      "frequencies, not one, and the spectrum is the folded one")
     elif vibration.clock is not None:
-        rate, slowest = vibration.clock.frame_rate_hz, SLOWEST_ALIAS_HZ
-        notes.append(f"blind within {slowest:g} Hz of {rate:.4g}, {2 * rate:.4g}, {3 * rate:.4g} Hz and so on (multiples of the "
+        rate, slowest = vibration.clock.frame_rate_hz, blind_half_width_hz(vibration.clock)
+        notes.append(f"blind within {slowest:.2g} Hz of {rate:.4g}, {2 * rate:.4g}, {3 * rate:.4g} Hz and so on (multiples of the "
                      "frame rate): a vibration there does not show between frames")
     notes += [_candidate_note(tone) for tone in vibration.folded[:2] if tone.candidates_hz]
     if optics.hfov_deg is None:

@@ -9,9 +9,9 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.ndimage import median_filter
+from scipy.ndimage import percentile_filter
 
-REPEAT_SHARE = 0.12       # change of a repeated frame over the local median change, at most
+REPEAT_SHARE = 0.12       # change of a repeated frame over the usual change around it, at most
 LEAST_CHANGE_LEVEL = 0.15  # grey levels: below this local change a still picture and a repeated one look alike
 GAP_INTERVALS = 1.5
 UNEVEN_SHARE = 0.02
@@ -52,7 +52,12 @@ def find_cadence_faults(time_s: np.ndarray, next_time_s: np.ndarray, change_leve
     interval = next_time_s - time_s
     typical = np.median(interval)
     # mirrored at the ends: a repeat as the very last pair must not be its own neighbourhood
-    local = median_filter(change_level, min(NEIGHBOURS, len(change_level)) | 1, mode="mirror")
+    # a high rank, not the median: in a converted frame rate most pairs may be repeats. The lower of what goes before and
+    # what comes after: a camera that comes to rest does not repeat itself
+    size = min(NEIGHBOURS, len(change_level)) // 2 + 1
+    before, after = (percentile_filter(change_level, 80, size, mode="mirror", origin=origin)
+                     for origin in ((size - 1) // 2, -((size - 1) // 2)))
+    local = np.minimum(before, after)
     repeated = (local > LEAST_CHANGE_LEVEL) & (change_level < REPEAT_SHARE * local)
     gap = interval > GAP_INTERVALS * typical
     dropped = gap | _long_steps(step_px / interval[:, None] * typical, repeated)

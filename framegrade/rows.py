@@ -33,6 +33,7 @@ BIWEIGHT_LIMIT = 4.685  # 95 % efficiency under normal errors (Huber, Ronchetti,
 #: Pairs per block: long enough for the temporal filter, short enough that memory does not grow with the clip.
 BLOCK_PAIRS = 480
 MIN_CELLS_PER_BAND = 4
+LEAST_LASTING_CELLS = 24
 #: A band known no better than this (standard deviation, native pixels) counts as not measured.
 WORST_BAND_PX = 0.5
 
@@ -206,18 +207,20 @@ def _robust_bands(values: np.ndarray, information: np.ndarray, basis: np.ndarray
     weight = used.astype(np.float32)
     spread = "nbk,bcik->nbci" if over == "c" else "nk,bcik->nbci"
     scale = np.ones(len(values))
-    for turn in range(4):
+    for turn in range(5):
         normal, right = _weighted_fit(values, information, weight, basis, over)
         fit, inverse = _solve(normal, right)
         distance = _distance(values - np.einsum(spread, fit, basis), information)
-        if not used.any():
+        if not used.any() or turn == 4:
             break
         # one scale a pair, floored: the cells' own error estimate is relative, moving objects are local
         masked = np.where(used, distance, np.nan).reshape(len(values), -1)
         masked[~used.any(axis=(1, 2))] = 1.0
         scale = np.maximum(np.nanmedian(masked, axis=1) / 0.8326, 1e-3)  # median of a 2-d.o.f. Rayleigh, over sqrt 2
-        start = 3.0 if turn == 0 else 1.0  # a gentle first cut: the first fit is not robust yet
-        weight = np.where(used, _biweight(distance / scale[:, None, None] / start), 0).astype(np.float32)
+        relative = distance / scale[:, None, None]
+        # two turns of least absolute values first: plain least squares is drawn to objects at the picture's edge
+        trial = 1 / np.maximum(relative, 0.3) if turn < 2 else _biweight(relative / (1.5 if turn == 2 else 1.0))
+        weight = np.where(used, trial, 0).astype(np.float32)
     return fit, inverse * (scale ** 2).reshape((-1,) + (1,) * (inverse.ndim - 1)), weight
 
 
@@ -250,7 +253,11 @@ def fit_block(pairs: list[PairMotion], grid: Grid, focal_px: float) -> RowSignal
     steady = slow_part(flow, valid, slow_half_width(interval, DRIFT_HALF_WIDTH_S)).astype(np.float32)
     # every cell counts alike here (scenery at other distances, not measuring noise, is what parts them), and a cell
     # counts always or never: one that drops out whenever the picture swings would tie its steady flow to the swing
-    lasting = np.broadcast_to((information[..., :1] > 0).mean(0) > 0.5, information[..., :1].shape)
+    lasting = (information[..., :1] > 0).mean(0) > 0.5
+    if lasting.sum() >= LEAST_LASTING_CELLS:
+        lasting = np.broadcast_to(lasting, information[..., :1].shape)
+    else:  # hardly a cell lasts (cuts, blur): better all that there are
+        lasting = information[..., :1] > 0
     drift, _, _ = _robust_bands(steady, lasting * _ALIKE, basis, "bc")
     sway, whole_variance, _ = _robust_bands(flow - steady, (information[..., :1] > 0) * _ALIKE, basis, "bc")
     whole = drift + sway

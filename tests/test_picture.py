@@ -173,7 +173,6 @@ def test_disturbed_pairs():
     assert np.flatnonzero(disturbed_pairs(at_end)).tolist() == [48]
 
 
-@pytest.mark.xfail(strict=True, reason="once half of the pairs are repeats, the running median is that of the repeats")
 @pytest.mark.parametrize("held", [2, 3])
 def test_every_picture_stored_twice_or_more(held):
     """30 (or 20) pictures a second in a file of 60."""

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from framegrade.rows import RowSignals
+from framegrade.rows import RowSignals, remove_slow
 from framegrade.spectrum.response import BLIND_GAIN, Clock, filter_gain
 from framegrade.spectrum.tones import AMPLITUDE_SYSTEMATIC, LEAST_TONE_PX1920, Tone, axis_data, detection_ratio
 
@@ -101,7 +101,9 @@ def find_folded_tones(signals: RowSignals, axis: int, clock: Clock, px_per_1920:
         if power[i, j] < threshold * noise or amplitude < LEAST_TONE_PX1920 * px_per_1920:
             break
         a, c = _polish(alias[i], cycles[j], residual, data, height, clock, 1 / (4 * span))
-        wave = np.exp(2j * np.pi * (np.outer(clock.frame_s - clock.frame_s[0], np.ones(len(height))) * a + height * c))
+        wave = np.exp(2j * np.pi * ((clock.frame_s - clock.frame_s[0])[:, None] * a + height * c))
+        # what the data went through, the fitted wave goes through; its gain mid-record is divided out again below
+        wave = remove_slow(wave, None, clock.half_width) / float(filter_gain(np.array([a]), clock)[0])
         fit = _fit(wave, residual, data.weight)
         residual = residual - np.where(data.weight > 0, fit[0] * wave.real - fit[1] * wave.imag, 0)
         g = 2 * abs(np.sin(np.pi * a / rate)) * float(filter_gain(np.array([a]), clock)[0]) * abs(np.sinc(c * signals.band_share))

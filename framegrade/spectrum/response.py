@@ -109,6 +109,13 @@ def observable(frequency_hz: np.ndarray, clock: Clock) -> np.ndarray:
     return (difference_gain(frequency_hz, clock) > BLIND_GAIN) & (alias >= min(SLOWEST_ALIAS_HZ, 0.2 * rate))
 
 
+def blind_half_width_hz(clock: Clock) -> float:
+    """How far a blind interval reaches either side of a multiple of the frame rate."""
+    offset = np.linspace(0, 0.5 * clock.frame_rate_hz, 2001)
+    seen = observable(clock.frame_rate_hz + offset, clock)
+    return float(offset[np.argmax(seen)]) if seen.any() else float(offset[-1])
+
+
 def highest_frequency_hz(clock: Clock, bands: int) -> float:
     """What the rows can resolve: 0.8 of the Nyquist frequency of the bands, or half the frame rate for a global shutter."""
     half_rate = 0.5 * clock.frame_rate_hz

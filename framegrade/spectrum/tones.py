@@ -43,6 +43,8 @@ AMPLITUDE_SYSTEMATIC_PX = 0.008
 #: The Cramer-Rao bound assumes white noise; errors of the flow follow the motion itself. The campaign's scatter is this
 #: many times the bound.
 BOUND_FACTOR = 2.0
+#: Ordinates this far above the noise beside a line are more than chance among the cells its wander may reach.
+CROWD_RATIO = 8.0
 #: Lines tried one by one before a neighbourhood is taken for a wandering tone.
 SEPARATE_LINES = 3
 #: What is left at a tone's own aliases, or half a frame rate away (encoders alternate the quality of frames), and no
@@ -117,6 +119,14 @@ def axis_data(signals: RowSignals, axis: int, clock: Clock) -> _Data | None:
     return _Data(np.where(valid, values, 0.0), weight, clock, span)
 
 
+def _humps(power: np.ndarray, gain: np.ndarray, seen: np.ndarray, frequency_hz: np.ndarray) -> np.ndarray:
+    """True where a wandering tone's width holds far more than its sides: of the motion's own power, seen parts only."""
+    out = np.zeros(len(power), bool)
+    if seen.sum() > 32:
+        out[seen] = _hump_ratio(power[seen] / gain[seen] ** 2, frequency_hz[seen]) > HUMP_RATIO
+    return out
+
+
 def detection_ratio(independent: float, alarm: float = FALSE_ALARM, noise_cells: float = 16.0) -> float:
     """Ordinate over estimated noise that noise alone exceeds with probability `alarm` anywhere in the search.
 
@@ -148,6 +158,11 @@ class Periodogram:
         w = -2j * np.pi
         self.frequency_hz = grid_hz
         self.frames = np.exp(w * np.outer(grid_hz, clock.frame_s - clock.frame_s[0])).astype(np.complex64)
+        spacing = (clock.end_s - clock.start_s).mean(1)
+        if np.ptp(spacing) > 0.02 * clock.interval_s:
+            # uneven frames: a pair's gain sin(pi f T) differs, even in sign, from its neighbour's
+            gain = np.sin(np.pi * np.outer(grid_hz, spacing))
+            self.frames *= (gain / np.sqrt(np.mean(gain ** 2, axis=1, keepdims=True) + 1e-6)).astype(np.float32)
         self.bands = np.exp(w * np.outer(grid_hz, clock.delay_s)).astype(np.complex64)
 
     def power(self, values: np.ndarray, weight: np.ndarray) -> np.ndarray:
@@ -307,7 +322,7 @@ def find_tones(data: _Data, axis: int, periodogram: Periodogram, px_per_1920: fl
     while len(bundles) <= MAX_TONES:
         power = periodogram.power(residual, data.weight)
         noise = _line_noise(power, grid)
-        hump = _hump_ratio(power, grid) > HUMP_RATIO
+        hump = _humps(power, gain, seen, grid)
         # amplitude of a sinusoid that would explain this much (power of a line: (A g / 2)^2 x samples)
         amplitude = 2 * np.sqrt(power / max(samples, 1)) / np.maximum(gain, 1e-3)
         candidate = ~blocked & ((power > threshold * noise) | hump) & (amplitude > least_px)
@@ -334,12 +349,30 @@ def find_tones(data: _Data, axis: int, periodogram: Periodogram, px_per_1920: fl
         reach = max(1.0 / data.duration_s, float(np.ptp(new.frequencies)) / 2 + 1 / data.duration_s)
         blocked = blocked | (np.abs(grid - new.frequencies.mean()) < reach)
         strengths = [0.0] + _strengths(bundles, coefficients)[1:]
-    frequencies = _refine(_all(bundles), _free(bundles), data, columns)
-    _put(bundles, frequencies)
+    bundles = _settle(bundles, data, columns)
+    frequencies = _all(bundles)
     coefficients, residual, inverse = _fit_lines(frequencies, data, columns)
     tones = _describe(bundles, frequencies, coefficients, inverse, residual, periodogram, data, axis)
     tones = [t for t in tones if t.amplitude_px >= max(least_px, t.amplitude_ci_px) and _clear_of_blind(t, clock)]
     return sorted(tones, key=lambda t: -t.amplitude_px), residual
+
+
+def _settle(bundles: list[_Bundle], data: _Data, columns: dict[float, np.ndarray]) -> list[_Bundle]:
+    """Refine all frequencies together; of steady lines that end closer than the record can part, the weaker goes.
+
+    Two such lines share one vibration's power between them, each far too large and against each other.
+    """
+    while True:
+        frequencies = _refine(_all(bundles), _free(bundles), data, columns)
+        _put(bundles, frequencies)
+        strengths = _strengths(bundles, _fit_lines(frequencies, data, columns)[0])
+        others = [(i, f) for i, b in enumerate(bundles) for f in b.frequencies]
+        close = [i for i, b in enumerate(bundles) if b.steady
+                 and any(j != i and abs(f - b.frequencies[0]) < 0.8 / data.duration_s for j, f in others)]
+        if not close:
+            return bundles
+        weakest = min(close, key=lambda i: strengths[i])
+        bundles = [b for i, b in enumerate(bundles) if i != weakest]
 
 
 def _clear_of_blind(tone: Tone, clock: Clock) -> bool:
@@ -385,7 +418,7 @@ def _widen(new, bundles, residual, before, periodogram, gain, samples, data, col
         power = periodogram.power(left, data.weight)
         around = float(np.interp(centre, grid, _side_noise(power, grid, MAX_WANDER * grid, 20.0)))
         amplitude = 2 * np.sqrt(power / max(samples, 1)) / np.maximum(gain, 1e-3)
-        strong = near & (power > 3 * around) & (amplitude > WANDER_SHARE * strength)
+        strong = near & (power > CROWD_RATIO * around) & (amplitude > WANDER_SHARE * strength)
         return np.where(strong, power, 0.0)
 
     frequencies = _all(bundles)
@@ -415,10 +448,12 @@ def _widen(new, bundles, residual, before, periodogram, gain, samples, data, col
         lines = lines[np.min(np.abs(lines[:, None] - taken), axis=1) > 0.5 * spacing]
     if len(lines) <= 3:
         return new
-    inside = (grid >= lines[0]) & (grid <= lines[-1])
+    seen = observable(grid, data.clock)
+    own, place = before[seen] / gain[seen] ** 2, grid[seen]
+    inside = (place >= lines[0]) & (place <= lines[-1])
     half = (lines[-1] - lines[0]) / 2
-    beside = np.interp((lines[0] + lines[-1]) / 2, grid, _side_noise(before, grid, half + 2 * spacing, 15.0))
-    return _Bundle(lines, False) if before[inside].mean() > HUMP_RATIO * beside else new
+    beside = np.interp((lines[0] + lines[-1]) / 2, place, _side_noise(own, place, half + 2 * spacing, 15.0))
+    return _Bundle(lines, False) if own[inside].mean() > HUMP_RATIO * beside else new
 
 
 def _strengths(bundles: list[_Bundle], coefficients: np.ndarray) -> list[float]:
