@@ -200,6 +200,20 @@ def _limits(arguments: argparse.Namespace) -> int:
     return OK
 
 
+# ------------------------------------------------------------------------------------------------------------ readout
+
+def _readout_arguments(parser: argparse.ArgumentParser) -> None:
+    from framegrade.readout import command
+
+    command.add_arguments(parser)
+
+
+def _readout(arguments: argparse.Namespace) -> int:
+    from framegrade.readout import command
+
+    return command.run(arguments)
+
+
 # ----------------------------------------------------------------------------------------------------------- simulate
 
 def _simulate_arguments(parser: argparse.ArgumentParser) -> None:
@@ -231,6 +245,7 @@ def _trace(arguments: argparse.Namespace) -> int:
 COMMANDS: dict[str, Command] = {
     "grade": Command("measure clips and grade them keep, stabilise or reshoot", _grade_arguments, _grade),
     "limits": Command("print the grading limits, to copy and change", _limits_arguments, _limits),
+    "readout": Command("measure a camera's readout time and field of view", _readout_arguments, _readout),
     "simulate": Command("render flights whose motion is known, to try things out", _simulate_arguments, _simulate),
     "trace": Command("explain tones: what turns or swings at each frequency", _trace_arguments, _trace),
 }

@@ -42,6 +42,7 @@ SHARED_FRAME = 0.45
 _PERIOD, HIGHEST_HZ, _HIGHEST_SHARE = 1.3, 16.0, 0.45
 #: Edges, in hertz, of the bands in which the path's power is taken as even.
 _POWER_EDGES_HZ = np.array([0.0, 0.4, 0.8, 1.3, 1.8, 2.4, 3.2, 4.2, 5.6, 7.5, 10.0, 13.0, np.inf])
+_SERIES_TERMS = 4  # of a phase that is at most about a tenth
 _TURNS, _SETTLED = 25, 8
 #: Errors (px) and squared path coefficients (px^2) that the search begins with.
 _FIRST_ERROR_PX, _FIRST_POWER_PX2 = 0.1, 10.0
@@ -216,12 +217,17 @@ class _Fit:
 
 def _path_design(stretch: _Stretch, readout_s: float) -> np.ndarray:
     """Terms seen of each path coefficient (cosines, then sines) for a readout; shape (pairs, terms, coefficients)."""
-    delay = (stretch.height - 0.5) * readout_s - stretch.start_s[0]
-    first = stretch.start_s[:, None] + delay
-    last = stretch.end_s[:, None] + delay + stretch.rise * readout_s
     turn = 2j * np.pi * stretch.frequency_hz
-    wave = np.exp(last[..., None] * turn) - np.exp(first[..., None] * turn)
-    seen = np.einsum("nib,nbk->nik", stretch.projection, wave, optimize=True)
+    delay = np.exp(np.outer((stretch.height - 0.5) * readout_s, turn))
+    # exp(turn x rise x readout) by its power series: the rise is the only part that does not factor into frame and band
+    shape, parts = stretch.projection, []
+    for order in range(_SERIES_TERMS):
+        if order:
+            shape = shape * (stretch.rise * readout_s / order)[:, None, :]
+        part = (shape.reshape(-1, len(stretch.height)) @ delay).reshape(stretch.pairs, TERMS, -1)
+        parts.append(part * turn ** order)
+    first, last = (np.exp(np.outer(t - stretch.start_s[0], turn))[:, None, :] for t in (stretch.start_s, stretch.end_s))
+    seen = last * sum(parts) - first * parts[0]
     return np.concatenate([seen.real, seen.imag], 2)
 
 

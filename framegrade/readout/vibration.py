@@ -32,8 +32,9 @@ from framegrade.spectrum.tones import axis_data
 
 #: Longer clips are taken in stretches of about this length, seconds: lines 1 / length apart are fine enough.
 STRETCH_S = 8.0
-#: Highest frequency believed in: what propellers and motors do.
-HIGHEST_HZ = 500.0
+#: Highest frequency believed in. Too low a limit would not only miss fast vibration: a rival readout with lower
+#: frequencies would then seem to be the only answer.
+HIGHEST_HZ = 1500.0
 #: Shortest and longest rolling readout believed in, shares of the frame interval.
 READOUT_SHARES = (0.03, 1.0)
 #: Aliases slower than this are sway and scenery.
@@ -46,7 +47,9 @@ LEAST_SHARE = 0.15
 _LEANING_CYCLES, _NEAR_HZ, _FAR_HZ = 0.7, 1.5, 10.0
 #: A weaker line at a stronger one's mirror image, or half a frame rate beside either, is a trace of it.
 TRACE_SHARE = 0.35
-MOST_LINES = 40
+MOST_LINES, MOST_WEIGHED = 40, 120
+#: Lines closer than this belong to one vibration.
+_LINK_HZ, _LINK_CYCLES = 1.5, 0.05
 #: Share of lines that are no vibration at all (coding, moving scenery), and the range of cycles they spread over.
 STRAY_SHARE, _STRAY_CYCLES = 0.1, 24.0
 #: Cycles are known no better than this, and than this share: bands have a centre of gravity of their own.
@@ -58,9 +61,10 @@ _WINDOW_SHARE = 1.5
 _GLOBAL_PRIOR = 0.1
 #: One answer must hold this much of the posterior; others above this much are rivals.
 CERTAIN, RIVAL = 0.99, 0.01
+MOST_NAMED = 12
 SYSTEMATIC_SHARE, SYSTEMATIC_FRAME = 0.005, 0.001
 WIDEST_SHARE, WIDEST_FRAME = 0.05, 0.02
-_STEP = 2e-4  # relative step of the search over the readout
+_STEP = 4e-4  # relative step of the search over the readout
 
 _INSTEAD = ("fly a clip in which the throttle rises and falls slowly, give several flights of this mode together, "
             "or film a swing clip (see --method swing)")
@@ -122,7 +126,8 @@ def _lines_of_axis(part: RowSignals, axis: int, px_per_1920: float) -> list[Line
     if data is None:
         return []
     rate = clock.frame_rate_hz
-    alias = np.arange(LOWEST_ALIAS_HZ, rate / 2 - LOWEST_ALIAS_HZ / 2, 1 / data.duration_s)
+    # nearer to half the frame rate a line runs into its own mirror image
+    alias = np.arange(LOWEST_ALIAS_HZ, rate / 2 - 2 / data.duration_s, 1 / data.duration_s)
     gain = difference_gain(alias, clock)
     window = np.hanning(part.pairs + 2)[1:-1]
     frames = np.exp(-2j * np.pi * np.outer(alias, clock.frame_s)) * window
@@ -187,6 +192,22 @@ def _is_trace(alias: float, strong: float, rate: float, width: float) -> bool:
     return abs(alias + strong - half) < width or abs(abs(alias - strong) - half) < width
 
 
+def _bundles(lines: Sequence[Line]) -> list[list[Line]]:
+    """Lines that belong to one vibration: each near another in alias and in cycles, whatever the axis and the stretch."""
+    left, out = list(lines), []
+    while left:
+        bundle, queue = [], [left.pop(0)]
+        while queue:
+            line = queue.pop()
+            bundle.append(line)
+            near = [other for other in left if abs(other.alias_hz - line.alias_hz) <= _LINK_HZ
+                    and abs(other.cycles - line.cycles) <= _LINK_CYCLES + 2 * np.hypot(other.cycles_sigma, line.cycles_sigma)]
+            queue += near
+            left = [other for other in left if other not in near]
+        out.append(bundle)
+    return out
+
+
 def weigh_readouts(lines: Sequence[Line], interval_s: float) -> list[Rival]:
     """Readouts the tones allow, most probable first; 0 stands for a global shutter.
 
@@ -206,17 +227,23 @@ def weigh_readouts(lines: Sequence[Line], interval_s: float) -> list[Rival]:
     grid = np.exp(np.arange(low, high + _STEP, _STEP))
     logs = np.zeros(len(grid))
     still = 0.0
-    for line in lines:
-        orders = np.arange(-np.floor(HIGHEST_HZ / line.frame_rate_hz), np.floor(HIGHEST_HZ / line.frame_rate_hz) + 1)
-        frequency = line.alias_hz + orders * line.frame_rate_hz
-        expected = grid[:, None] * frequency[None, :]
-        sigma = np.sqrt(line.cycles_sigma ** 2 + _LEAST_SIGMA ** 2 + (_SHARE_SIGMA * line.cycles) ** 2)
-        terms = -0.5 * ((line.cycles - expected) / sigma) ** 2
-        comb = logsumexp(terms, axis=1) - np.log(len(frequency) * sigma * np.sqrt(2 * np.pi))
-        flat = -0.5 * (line.cycles / sigma) ** 2 - np.log(sigma * np.sqrt(2 * np.pi))
-        stray = np.log(STRAY_SHARE / _STRAY_CYCLES)
-        logs += np.logaddexp(np.log1p(-STRAY_SHARE) + comb, stray)
-        still += float(np.logaddexp(np.log1p(-STRAY_SHARE) + flat, stray))
+    stray = np.log(STRAY_SHARE / _STRAY_CYCLES)
+    lines = sorted(lines, key=lambda one: -one.amplitude_px)[:MOST_WEIGHED]
+    for bundle in _bundles(lines):
+        rate = bundle[0].frame_rate_hz
+        orders = np.arange(-np.floor(HIGHEST_HZ / rate), np.floor(HIGHEST_HZ / rate) + 1)
+        together = np.zeros((len(grid), len(orders)))
+        for line in bundle:
+            sigma = np.sqrt(line.cycles_sigma ** 2 + _LEAST_SIGMA ** 2 + (_SHARE_SIGMA * line.cycles) ** 2)
+            scale = np.log1p(-STRAY_SHARE) - np.log(sigma * np.sqrt(2 * np.pi))
+            expected = grid[:, None] * (line.alias_hz + orders * rate)
+            together += np.logaddexp(scale - 0.5 * ((line.cycles - expected) / sigma) ** 2, stray)
+            still += float(np.logaddexp(scale - 0.5 * (line.cycles / sigma) ** 2, stray))
+        # One prior for the whole bundle. Frequencies are spread evenly over octaves: if evenly over hertz, a low readout
+        # would be favoured for nothing but the narrow span of cycles it makes of them.
+        frequency = np.abs(bundle[0].alias_hz + orders * rate)
+        prior = -np.log(np.maximum(frequency, LOWEST_ALIAS_HZ))
+        logs += logsumexp(together + prior - logsumexp(prior), axis=1)
     prior = np.log((1 - _GLOBAL_PRIOR) / len(grid))
     total = logsumexp(np.append(logs + prior, still + np.log(_GLOBAL_PRIOR)))
     mass = np.exp(logs + prior - total)
@@ -265,8 +292,9 @@ def measure_vibration(lines: Sequence[Line], interval_s: float) -> Readout:
         raise CannotTell("its vibration tones fit no readout time better than others", _INSTEAD)
     best = rivals[0]
     if best.share < CERTAIN:
-        shown = ", ".join("0 (global shutter)" if r.readout_s == 0 else f"{r.readout_s * 1e3:.2f} ms" for r in rivals[:6])
-        more = f" and {len(rivals) - 6} more" if len(rivals) > 6 else ""
+        named = sorted(r.readout_s for r in rivals[:MOST_NAMED])
+        shown = ", ".join("0 (global shutter)" if r == 0 else f"{r * 1e3:.2f}" for r in named) + " ms"
+        more = f" and {len(rivals) - MOST_NAMED} more" if len(rivals) > MOST_NAMED else ""
         raise CannotTell(f"its vibration tones fit several readout times: {shown}{more}", _INSTEAD)
     ci = float(np.sqrt((NORMAL_95 * best.sigma_s) ** 2 + (SYSTEMATIC_SHARE * best.readout_s) ** 2
                        + (SYSTEMATIC_FRAME * interval_s) ** 2))
