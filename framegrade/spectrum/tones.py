@@ -353,7 +353,7 @@ def find_tones(data: _Data, axis: int, periodogram: Periodogram, px_per_1920: fl
     frequencies = _all(bundles)
     coefficients, residual, inverse = _fit_lines(frequencies, data, columns)
     tones = _describe(bundles, frequencies, coefficients, inverse, residual, periodogram, data, axis)
-    tones = [t for t in tones if t.amplitude_px >= max(least_px, t.amplitude_ci_px) and _clear_of_blind(t, clock)]
+    tones = [t for t in tones if t.amplitude_px >= max(least_px, 2 * t.amplitude_ci_px) and _clear_of_blind(t, clock)]
     return sorted(tones, key=lambda t: -t.amplitude_px), residual
 
 

@@ -35,8 +35,8 @@ LOWEST_HZ, HIGHEST_HZ = 12.0, 600.0
 #: Relative frequency step of the search, and the relative glides tried, per second.
 STEP = 0.0025
 GLIDES_PER_S = np.linspace(-0.4, 0.4, 9)
-#: A path that departs from its own glide by this share of its frequency from window to window pays one e-fold of evidence;
-#: and so does one that moves by the other: where nothing is seen any glide fits, and paths must not stroll for nothing.
+#: A path that departs from its own glide by this share of its frequency from window to window pays one e-fold of
+#: evidence; and so does one that moves by the other: where nothing is seen any glide fits, and no path may stroll.
 WORTH_OF_BEND, WORTH_OF_MOVE = 0.02, 0.05
 #: A step from window to window lies between what both windows' glides make, within this: error of a window's frequency,
 #: error of a glide per second, and the longest gap that is bridged.
