@@ -115,6 +115,28 @@ def test_tracks_of_a_throttle_change(rate, readout):
     assert track_tones(signals, clock, 1, 600.0) == ()  # pitch holds noise only
 
 
+def test_tracks_do_not_change_over_to_an_alias():
+    """With a short readout the alias at 151.8 Hz of a tone at 91.8 Hz looks nearly as strong, and a shaft passes by."""
+    turns = bench.throttle(115.0, 165.0, 1.5, 3.5)
+
+    def motion(t):
+        return 0.6 * np.cos(2 * np.pi * turns(t)) + 0.5 * np.cos(2 * np.pi * 91.8 * t)
+
+    signals = made.row_signals(motion, made.frame_times(60.0, 6.0), 0.005, noise_px=0.05)
+    found = track_tones(signals, exposure_clock(signals, 0.005), 0, 600.0, least_px=0.02)
+    steady, moving = sorted(found, key=lambda t: np.nanmedian(t.frequency_hz))
+    assert np.nanmax(np.abs(steady.frequency_hz - 91.8)) < 2.0 and np.isfinite(steady.frequency_hz[:8]).all()
+    assert np.nanmax(np.abs(moving.frequency_hz[:5] - 115.0)) < 1.0 and np.isfinite(moving.frequency_hz[:5]).all()
+
+
+@pytest.mark.parametrize("frequency", [123.4, 143.0])
+def test_track_amplitude_beside_a_blind_interval(frequency):
+    """3.4 Hz beside twice the frame rate the temporal high-pass takes a part away, which is given back."""
+    signals = made.row_signals(made.tone(frequency, 0.5), made.frame_times(60.0, 5.0), READOUT_S, noise_px=0.01)
+    found, = track_tones(signals, exposure_clock(signals, READOUT_S), 0, 500.0, least_px=0.02)
+    assert np.nanmedian(found.amplitude_px) == pytest.approx(0.5, rel=0.04)
+
+
 @pytest.mark.parametrize("seed", range(4))
 def test_no_track_in_noise(seed):
     signals = made.row_signals(made.still, made.frame_times(60.0, 4.0), READOUT_S, noise_px=0.1, seed=seed)
@@ -237,6 +259,18 @@ def test_hover_speed_decides(hover_hz, order):
     assert only(trace_take(take(("yaw", 150.0, 0.3)), airframe)).candidates[0].order == order
 
 
+def test_what_is_hidden_does_not_count():
+    """Blade pass alone: less likely where once per turn would show (75 Hz) than where it is blind (61 Hz at 60 a second)."""
+    airframe = dataclasses.replace(QUAD, blades=3, hover_rpm=None, full_rpm=60 * 130.0, magnet_poles=None)
+
+    def blade_pass(f):
+        shares = {c.order: c.probability for c in only(trace_take(take(("yaw", f, 0.3)), airframe)).candidates}
+        return shares[3], shares[2]
+
+    (hidden, hidden_twice), (shown, shown_twice) = blade_pass(3 * 61.0), blade_pass(3 * 75.0)
+    assert hidden / hidden_twice > 3 * shown / shown_twice
+
+
 def test_reach_rules_out():
     """At full speed 5000 rpm, 150 Hz cannot be once per turn (9000 rpm): it is the next that is within reach."""
     airframe = dataclasses.replace(QUAD, blades=3, hover_rpm=3100, full_rpm=5000, idle_rpm=900)
@@ -357,6 +391,18 @@ def test_unknown_readout_is_implied():
         assert first.frequency_hz == pytest.approx(f) and first.readout_s == pytest.approx(READOUT_S)
         assert np.isnan(tone.frequency_hz)  # the tone itself has no single frequency
     assert any("14.0 ms" in note and "not known" in note for note in traced.notes)
+
+
+def test_one_readout_for_all_tones():
+    """197.3 Hz would be the hover speed, at 7.0 ms; but a known resonance at 46 Hz shows that the readout is 10 ms."""
+    airframe = dataclasses.replace(QUAD, hover_rpm=60 * 197.3, full_rpm=15000, mount=Mount(resonance_hz=46.0))
+    shaft, resonance = ("yaw", 137.3, 0.5), ("roll", 46.0, 0.3)
+    alone = only(trace_take(folded_take(shaft, readout_s=0.010), airframe)).candidates[0]
+    assert alone.frequency_hz == pytest.approx(197.3) and 1e3 * alone.readout_s == pytest.approx(6.96, abs=0.01)
+    both = trace_take(folded_take(shaft, resonance, readout_s=0.010), airframe)
+    first = [tone.candidates[0] for tone in both.tones]
+    assert [round(c.frequency_hz, 1) for c in first] == [137.3, 46.0]
+    assert {round(1e3 * c.readout_s, 2) for c in first} == {10.0}
 
 
 def test_unknown_readout_out_of_reach():

@@ -60,7 +60,8 @@ def pixel_scale(truth: Truth) -> np.ndarray:
     return np.array([truth.focal_px, truth.focal_px, truth.facts["camera"]["width_px"] / 2])
 
 
-def _below(series: np.ndarray, cut_hz: float, rate_hz: float) -> np.ndarray:
+def below(series: np.ndarray, cut_hz: float, rate_hz: float) -> np.ndarray:
+    """What is slower than `cut_hz`, along the first axis (zero-phase Butterworth)."""
     sections = butter(4, cut_hz, fs=rate_hz, output="sos")
     return sosfiltfilt(sections, series, axis=0, padlen=min(len(series) - 1, int(2 * rate_hz / cut_hz)))
 
@@ -78,7 +79,7 @@ def true_figures(rendered: Rendered) -> dict[str, float]:
     px = truth.seen_rad * pixel_scale(truth)
     interval = float(np.median(np.diff(truth.pts_s)))
     frame = px.mean(1)
-    travel, slow = _below(frame, 0.5, 1 / interval), _below(frame, 3.0, 1 / interval)
+    travel, slow = below(frame, 0.5, 1 / interval), below(frame, 3.0, 1 / interval)
     lean = np.gradient(slow, interval, axis=0)[:, None] * ((truth.heights - 0.5) * readout)[None, :, None]
     rows = px - frame[:, None] - lean
     rows = rows - rows.mean(1, keepdims=True)
@@ -87,7 +88,7 @@ def true_figures(rendered: Rendered) -> dict[str, float]:
         return float(np.sqrt(np.mean(part ** 2 @ weight)) * 1920 / width)
 
     time, dense = dense_motion(rendered)
-    fast = dense - _below(dense, 3.0, 1 / (time[1] - time[0]))
+    fast = dense - below(dense, 3.0, 1 / (time[1] - time[0]))
     mdeg = np.degrees(fast / pixel_scale(truth)) * 1e3
     return {"sway": rms(slow - travel), "shake": rms(frame - slow), "jello": rms(rows),
             "vibration_mdeg": float(np.sqrt((mdeg.std(0) ** 2).sum()))}
