@@ -116,24 +116,25 @@ def test_tracks_of_a_throttle_change(rate, readout):
 
 
 def test_tracks_do_not_change_over_to_an_alias():
-    """With a short readout the alias at 151.8 Hz of a tone at 91.8 Hz looks nearly as strong, and a shaft passes by."""
-    turns = bench.throttle(115.0, 165.0, 1.5, 3.5)
+    """With a readout of 3 ms at 60 frames/s aliases look nearly as strong as the tones they are of."""
+    turns = bench.throttle(100.0, 130.0, 1.5, 3.5)
 
     def motion(t):
-        return 0.6 * np.cos(2 * np.pi * turns(t)) + 0.5 * np.cos(2 * np.pi * 91.8 * t)
+        return 0.5 * np.cos(2 * np.pi * turns(t)) + 0.45 * np.cos(2 * np.pi * 47.0 * t)
 
-    signals = made.row_signals(motion, made.frame_times(60.0, 6.0), 0.005, noise_px=0.05)
-    found = track_tones(signals, exposure_clock(signals, 0.005), 0, 600.0, least_px=0.02)
+    signals = made.row_signals(motion, made.frame_times(60.0, 6.0), 0.003, noise_px=0.05)
+    found = track_tones(signals, exposure_clock(signals, 0.003), 0, 600.0, least_px=0.02)
     steady, moving = sorted(found, key=lambda t: np.nanmedian(t.frequency_hz))
-    assert np.nanmax(np.abs(steady.frequency_hz - 91.8)) < 2.0 and np.isfinite(steady.frequency_hz[:8]).all()
-    assert np.nanmax(np.abs(moving.frequency_hz[:5] - 115.0)) < 1.0 and np.isfinite(moving.frequency_hz[:5]).all()
+    true = (turns(moving.time_s + 1e-4) - turns(moving.time_s - 1e-4)) / 2e-4
+    assert np.nanmax(np.abs(steady.frequency_hz - 47.0)) < 1.5 and np.isfinite(steady.frequency_hz).mean() > 0.5
+    assert np.nanmax(np.abs(moving.frequency_hz / true - 1)) < 0.02 and np.isfinite(moving.frequency_hz).mean() > 0.5
 
 
-@pytest.mark.parametrize("frequency", [123.4, 143.0])
-def test_track_amplitude_beside_a_blind_interval(frequency):
-    """3.4 Hz beside twice the frame rate the temporal high-pass takes a part away, which is given back."""
+@pytest.mark.parametrize("frequency", [123.4, 550.0])
+def test_track_amplitude(frequency):
+    """Beside a blind interval, and where a band of rows averages over a quarter of a cycle (to 90 %)."""
     signals = made.row_signals(made.tone(frequency, 0.5), made.frame_times(60.0, 5.0), READOUT_S, noise_px=0.01)
-    found, = track_tones(signals, exposure_clock(signals, READOUT_S), 0, 500.0, least_px=0.02)
+    found, = track_tones(signals, exposure_clock(signals, READOUT_S), 0, 600.0, least_px=0.02)
     assert np.nanmedian(found.amplitude_px) == pytest.approx(0.5, rel=0.04)
 
 
@@ -260,7 +261,7 @@ def test_hover_speed_decides(hover_hz, order):
 
 
 def test_what_is_hidden_does_not_count():
-    """Blade pass alone: less likely where once per turn would show (75 Hz) than where it is blind (61 Hz at 60 a second)."""
+    """Blade pass alone: less likely where once per turn would show (75 Hz) than where it is blind (61 Hz)."""
     airframe = dataclasses.replace(QUAD, blades=3, hover_rpm=None, full_rpm=60 * 130.0, magnet_poles=None)
 
     def blade_pass(f):
