@@ -22,6 +22,7 @@ from framegrade.report.tables import (
 from framegrade.report.terminal import make_console
 from framegrade.settings_file import SettingsError
 from framegrade.sources import GROUND_RUN_CAUTIONS, Candidate, TakeTrace, ToneTrace, trace_take
+from framegrade.sources.wording import percent
 
 OK, SOME_FAILED, WRONG_USE = 0, 1, 2
 TRACE_FILE = "trace.csv"
@@ -284,16 +285,12 @@ def _tone_lines(tone: ToneTrace, width: int) -> Iterator[Text]:
         yield from _wrapped(swept, 6, width)
     for other in tone.candidates[1:3] if explained else tone.candidates[:2]:
         yield from _wrapped(f"{'or' if explained else 'least unlikely:'} {_cause_words(other)}, "
-                            f"{_percent(other.probability)}: {other.reason}", 6, width)
+                            f"{percent(other.probability)}: {other.reason}", 6, width)
     if tone.ruled_out and tone.confidence != "named":
         yield from _wrapped(f"ruled out: {tone.ruled_out[0]}" + (
             f"; and {len(tone.ruled_out) - 1} more" if len(tone.ruled_out) > 1 else ""), 6, width)
     if tone.isolator_gain >= 1:
         yield from _wrapped(tone.isolator, 6, width)
-
-
-def _percent(probability: float) -> str:
-    return "under 1 %" if probability < 0.01 else f"{100 * probability:.0f} %"
 
 
 def _frequency_words(tone: ToneTrace) -> str:

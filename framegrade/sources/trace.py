@@ -379,7 +379,7 @@ def _confidence(line, readings, candidates, airframe, family, view) -> tuple[str
                                "than stated")
     first = candidates[0]
     support = _support(line, first, airframe, family)
-    percent = f"{100 * first.probability:.0f} %"
+    percent = wording.percent(first.probability)
     if first.probability >= NAMED and support and view.shutter == "known":
         return "named", f"{percent}: {', '.join(support)}"
     if first.probability >= LIKELY:
@@ -442,7 +442,7 @@ def _readout_note(tones: Sequence[ToneTrace]) -> str:
         return "the readout time is not known, and no candidate frequency fits a speed within reach"
     best = max(implied, key=lambda r: implied[r])
     return (f"the readout time is not known: the causes given would need one of {1e3 * best:.1f} ms "
-            f"({100 * implied[best]:.0f} %); measure it to be sure")
+            f"({wording.percent(implied[best])}); measure it to be sure")
 
 
 def _motors_note(shafts: Sequence[Shaft], airframe: Airframe, view: View) -> str:

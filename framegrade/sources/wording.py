@@ -26,6 +26,13 @@ GROUND_RUN_CAUTIONS = (
 )
 
 
+def percent(probability: float) -> str:
+    """A probability in whole percent that never claims all or nothing."""
+    if probability < 0.01:
+        return "under 1 %"
+    return "over 99 %" if probability > 0.99 else f"{100 * probability:.0f} %"
+
+
 def speed_words(airframe: Airframe, speed_rpm: float) -> str:
     """Where a speed lies: against hover if that is known, else within reach."""
     reach = airframe.reach
