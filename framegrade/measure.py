@@ -35,7 +35,7 @@ from framegrade.spectrum.bands import band_power, third_octave_bands
 from framegrade.spectrum.folded import FoldedTone, find_folded_tones, fold
 from framegrade.spectrum.levels import FittedTone, Levels, add_tones, bridged, measure_levels
 from framegrade.spectrum.response import Clock, blind_half_width_hz, exposure_clock, highest_frequency_hz
-from framegrade.spectrum.tones import LEAST_TONE_PX1920, Periodogram, Tone, axis_data, find_tones, stretch_periodogram
+from framegrade.spectrum.tones import LEAST_TONE_PX1920, Periodogram, Tone, axis_data, find_tones
 
 SHORTEST_CLIP_S = 1.0
 WINDOW_S = 0.5
@@ -251,7 +251,7 @@ def analyse(signals: RowSignals, optics: Optics, width_px: int, rhythm: CodingRh
         for stretch in _stretches(signals, optics.readout_s, highest):
             work = [pool.submit(_tones_of_stretch, signals, axis, stretch, per_1920, rhythm) for axis in range(3)]
             pending.append((stretch, work))
-            if len(pending) > 2:  # a search kernel takes tens of megabytes: only a few at a time
+            if len(pending) > 1:  # a stretch's search arrays take tens of megabytes: two at a time
                 collect()
         while pending:
             collect()
@@ -283,7 +283,7 @@ def _stretches(signals: RowSignals, readout_s: float, highest_hz: float) -> Iter
     for first, last in zip(edges[:-1], edges[1:]):
         clock = exposure_clock(cut(signals, first, last), readout_s)
         duration = float(signals.next_time_s[last - 1] - signals.time_s[first])
-        yield _Stretch(first, last, clock, stretch_periodogram(clock, duration, highest_hz))
+        yield _Stretch(first, last, clock, Periodogram(clock, duration, highest_hz))
 
 
 def _tones_of_stretch(signals: RowSignals, axis: int, stretch: _Stretch, per_1920: float,

@@ -21,7 +21,7 @@ from framegrade.spectrum.levels import measure_levels
 from framegrade.spectrum.response import (
     difference_gain, difference_response, exposure_clock, filter_gain, highest_frequency_hz, observable,
 )
-from framegrade.spectrum.tones import axis_data, detection_ratio, find_tones, stretch_periodogram
+from framegrade.spectrum.tones import Periodogram, axis_data, detection_ratio, find_tones
 from tests import signals as made
 
 READOUT_S = 0.014      # of a frame interval of 16.7 ms
@@ -33,7 +33,7 @@ def tones_in(signals, readout_s, axis=0, px_per_1920=PER_1920):
     clock = exposure_clock(signals, readout_s)
     highest = min(1000.0, highest_frequency_hz(clock, len(signals.height)))
     data = axis_data(signals, axis, clock)
-    return find_tones(data, axis, stretch_periodogram(clock, data.duration_s, highest), px_per_1920)[0]
+    return find_tones(data, axis, Periodogram(clock, data.duration_s, highest), px_per_1920)[0]
 
 
 def levels_in(signals, readout_s, axis=0):
@@ -369,7 +369,7 @@ def test_matched_filter_against_lomb_scargle():
     motion = made.tones((17.3, 0.2, 0.3), (8.1, 0.1, 1.0))
     signals = made.row_signals(motion, made.frame_times(60, 4), 0.0, noise_px=0.05, bands=1)
     values = signals.fast_px[..., 0]
-    periodogram = stretch_periodogram(exposure_clock(signals, 0.0), 4.0, 29.0)
+    periodogram = Periodogram(exposure_clock(signals, 0.0), 4.0, 29.0)
     mid = 0.5 * (signals.time_s + signals.next_time_s)
     own = periodogram.power(values, np.ones_like(values))
     plain = np.abs(np.exp(-2j * np.pi * np.outer(periodogram.frequency_hz, mid)) @ values[:, 0]) ** 2 / len(values)

@@ -20,6 +20,7 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 import numpy as np
+from scipy.fft import fft, next_fast_len
 from scipy.ndimage import median_filter
 
 from framegrade.picture import CodingRhythm
@@ -147,29 +148,47 @@ def detection_ratio(independent: float, alarm: float = FALSE_ALARM, noise_cells:
     return noise_cells * ((independent / alarm) ** (1 / noise_cells) - 1)
 
 
-def _search_grid(clock: Clock, duration_s: float, highest_hz: float) -> np.ndarray:
-    return np.arange(LOWEST_TONE_HZ, highest_hz, 1.0 / (OVERSAMPLING * duration_s))
-
-
 class Periodogram:
-    """Matched filter of the exposure clock at every search frequency (the kernel is shared by all residuals)."""
+    """Matched filter of the exposure clock at every search frequency; one serves all residuals of a stretch.
 
-    def __init__(self, clock: Clock, grid_hz: np.ndarray) -> None:
-        w = -2j * np.pi
-        self.frequency_hz = grid_hz
-        self.frames = np.exp(w * np.outer(grid_hz, clock.frame_s - clock.frame_s[0])).astype(np.complex64)
+    Attributes
+    ----------
+    frequency_hz : ndarray, shape (frequencies,)
+        The search grid, `OVERSAMPLING` points per resolution cell.
+    """
+
+    def __init__(self, clock: Clock, duration_s: float, highest_hz: float) -> None:
         spacing = (clock.end_s - clock.start_s).mean(1)
+        # all frequencies of the grid are multiples of one step, so evenly spaced frames need one fast transform a band
+        self._points = next_fast_len(int(np.ceil(OVERSAMPLING * duration_s / clock.interval_s)))
+        step = 1 / (self._points * clock.interval_s)
+        index = np.arange(int(np.ceil(LOWEST_TONE_HZ / step)), int(highest_hz / step) + 1)
+        self.frequency_hz = index * step
+        self._fold = index % self._points
+        self._kernel = None
         if np.ptp(spacing) > 0.02 * clock.interval_s:
-            # uneven frames: a pair's gain sin(pi f T) differs, even in sign, from its neighbour's
-            gain = np.sin(np.pi * np.outer(grid_hz, spacing))
-            self.frames *= (gain / np.sqrt(np.mean(gain ** 2, axis=1, keepdims=True) + 1e-6)).astype(np.float32)
-        self.bands = np.exp(w * np.outer(grid_hz, clock.delay_s)).astype(np.complex64)
+            self._kernel = self._uneven_kernel(clock, spacing)
+        self._bands = np.exp(-2j * np.pi * np.outer(self.frequency_hz, clock.delay_s)).astype(np.complex64)
+
+    def _uneven_kernel(self, clock: Clock, spacing: np.ndarray) -> np.ndarray:
+        """For uneven frames: a pair's gain sin(pi f T) differs, even in sign, from its neighbour's."""
+        time = clock.frame_s - clock.frame_s[0]
+        kernel = np.empty((len(self.frequency_hz), len(time)), np.complex64)
+        for part in np.array_split(np.arange(len(kernel)), max(1, len(kernel) // 1024)):
+            f = self.frequency_hz[part]
+            gain = np.sin(np.pi * np.outer(f, spacing))
+            gain /= np.sqrt(np.mean(gain ** 2, axis=1, keepdims=True) + 1e-6)
+            kernel[part] = np.exp(-2j * np.pi * np.outer(f, time)) * gain
+        return kernel
 
     def power(self, values: np.ndarray, weight: np.ndarray) -> np.ndarray:
-        """Explained sum of squares per unit weight, `|sum w y h*|^2 / sum w^2`-like; shape (frequencies,)."""
+        """Explained sum of squares per unit weight, `|sum w y h*|^2 / sum w^2`; shape (frequencies,)."""
         weighted = (values * weight).astype(np.float32)
-        folded = self.frames @ weighted.astype(np.complex64)
-        return np.abs((folded * self.bands).sum(1)) ** 2 / max(float((weight ** 2).sum()), 1e-12)
+        if self._kernel is None:
+            folded = fft(weighted, self._points, axis=0)[self._fold]
+        else:
+            folded = self._kernel @ weighted.astype(np.complex64)
+        return np.abs((folded * self._bands).sum(1)) ** 2 / max(float((weight ** 2).sum()), 1e-12)
 
 
 def _side_noise(power: np.ndarray, frequency_hz: np.ndarray, near_hz: np.ndarray | float, width_hz: float) -> np.ndarray:
@@ -276,11 +295,6 @@ class _Bundle:
     steady: bool
 
 
-def stretch_periodogram(clock: Clock, duration_s: float, highest_hz: float) -> Periodogram:
-    """The search grid of a stretch with its matched filter; the same for all axes."""
-    return Periodogram(clock, _search_grid(clock, duration_s, highest_hz))
-
-
 def find_tones(data: _Data, axis: int, periodogram: Periodogram, px_per_1920: float,
                rhythm: CodingRhythm | None = None) -> tuple[list[Tone], np.ndarray]:
     """Tones of one axis, strongest first.
@@ -291,7 +305,7 @@ def find_tones(data: _Data, axis: int, periodogram: Periodogram, px_per_1920: fl
     axis : int
         0 yaw, 1 pitch, 2 roll.
     periodogram : Periodogram
-        From `stretch_periodogram`, for the same clock.
+        For the same clock.
     px_per_1920 : float
         Native pixels per pixel of a 1920-wide picture (width / 1920).
     rhythm : CodingRhythm, optional
