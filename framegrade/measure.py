@@ -36,6 +36,7 @@ from framegrade.spectrum.folded import FoldedTone, find_folded_tones, fold
 from framegrade.spectrum.levels import FittedTone, Levels, add_tones, bridged, measure_levels
 from framegrade.spectrum.response import Clock, blind_half_width_hz, exposure_clock, highest_frequency_hz
 from framegrade.spectrum.tones import LEAST_TONE_PX1920, Periodogram, Tone, axis_data, find_tones
+from framegrade.spectrum.tracks import Track, track_tones, tracks_to_extra
 
 SHORTEST_CLIP_S = 1.0
 WINDOW_S = 0.5
@@ -116,6 +117,7 @@ class Vibration:
     levels: tuple[Levels | None, ...]
     tones: tuple[Tone, ...]
     folded: tuple[FoldedTone, ...]
+    tracks: tuple[Track, ...] = ()
 
 
 def measure_clip(path: Path, settings: MeasureSettings | None = None,
@@ -264,7 +266,11 @@ def analyse(signals: RowSignals, optics: Optics, width_px: int, rhythm: CodingRh
     tones = tuple(sorted(tones, key=lambda t: -t.amplitude_px))
     if optics.readout_s == 0:
         return Vibration(clock, tuple(levels), (), tuple(fold(tone, clock.interval_s) for tone in tones))
-    return Vibration(clock, tuple(levels), tones, ())
+    # following tones over time costs as much as finding them: only where one moves
+    moving = any(tone.wander_hz > 0 for tone in tones)
+    axes = sorted({tone.axis for tone in tones}) if moving else []
+    tracks = tuple(track for axis in axes for track in track_tones(signals, clock, axis, highest, least_px=least))
+    return Vibration(clock, tuple(levels), tones, (), tracks)
 
 
 @dataclass(frozen=True)
@@ -635,7 +641,7 @@ def _extra(info, optics, limits, signals, cadence, vibration, jello) -> dict:
         "jello_floor_px1920": float(screen.to_px1920(jello.floor_px, info.width_px)) if np.isfinite(jello.floor_px) else None,
         "repeated_frames": int(cadence.repeated.sum()), "dropped_gaps": int(cadence.dropped.sum()),
         "uneven_share": float(cadence.uneven), "frozen_pct": 100 * float(np.mean(signals.frozen)),
-        "wander_hz": [t.wander_hz for t in vibration.tones],
+        "tracks": tracks_to_extra(vibration.tracks), "wander_hz": [t.wander_hz for t in vibration.tones],
         "candidates": [{"axis": AXES[t.axis], "alias_hz": t.alias_hz, "cycles_per_frame": t.cycles_per_frame,
                         "amplitude_px": t.amplitude_px, "candidates_hz": list(t.candidates_hz),
                         "readout_s": list(t.candidate_readout_s)} for t in vibration.folded],

@@ -158,7 +158,6 @@ class Periodogram:
     """
 
     def __init__(self, clock: Clock, duration_s: float, highest_hz: float) -> None:
-        spacing = (clock.end_s - clock.start_s).mean(1)
         # all frequencies of the grid are multiples of one step, so evenly spaced frames need one fast transform a band
         self._points = next_fast_len(int(np.ceil(OVERSAMPLING * duration_s / clock.interval_s)))
         step = 1 / (self._points * clock.interval_s)
@@ -166,13 +165,13 @@ class Periodogram:
         self.frequency_hz = index * step
         self._fold = index % self._points
         self._kernel = None
-        if np.ptp(spacing) > 0.02 * clock.interval_s:
-            self._kernel = self._uneven_kernel(clock, spacing)
+        if np.ptp(np.diff(clock.start_s[:, 0])) > 0.02 * clock.interval_s:
+            self._kernel = self._uneven_kernel(clock)
         self._bands = np.exp(-2j * np.pi * np.outer(self.frequency_hz, clock.delay_s)).astype(np.complex64)
 
-    def _uneven_kernel(self, clock: Clock, spacing: np.ndarray) -> np.ndarray:
+    def _uneven_kernel(self, clock: Clock) -> np.ndarray:
         """For uneven frames: a pair's gain sin(pi f T) differs, even in sign, from its neighbour's."""
-        time = clock.frame_s - clock.frame_s[0]
+        time, spacing = clock.frame_s - clock.frame_s[0], (clock.end_s - clock.start_s).mean(1)
         kernel = np.empty((len(self.frequency_hz), len(time)), np.complex64)
         for part in np.array_split(np.arange(len(kernel)), max(1, len(kernel) // 1024)):
             f = self.frequency_hz[part]
