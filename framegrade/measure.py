@@ -19,14 +19,13 @@ from threadpoolctl import threadpool_limits
 
 from framegrade import grading, screen
 from framegrade.camera import Camera
+from framegrade.coding import CodingRhythm, find_coding_rhythm
 from framegrade.footage import ClipInfo, FootageError, ReadFaults, probe, read_frames, timecode
 from framegrade.memory import keep_large_blocks
 from framegrade.motion import make_grid, measure_motion
 from framegrade.path import Path as PicturePath
 from framegrade.path import SHAKE_ABOVE_HZ, crop_needed_pct, split_path
-from framegrade.picture import (
-    Cadence, CodingRhythm, disturbed_pairs, find_cadence_faults, find_coding_rhythm, stalled_pairs,
-)
+from framegrade.picture import Cadence, disturbed_pairs, find_cadence_faults, stalled_pairs
 from framegrade.records import AXES, MOTION_COLUMNS, RANGE_COLUMNS, SPECTRUM_COLUMNS, TONE_COLUMNS, WINDOW_COLUMNS, TakeRecord
 from framegrade.rows import (
     ASSUMED_HFOV_DEG, RowSignals, band_mean, band_signals, cut, focal_length_px, remove_slow, slow_half_width,

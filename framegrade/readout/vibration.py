@@ -117,7 +117,16 @@ def spectral_lines(signals: RowSignals, px_per_1920: float) -> tuple[Line, ...]:
     span = signals.next_time_s[-1] - signals.time_s[0]
     edges = np.linspace(0, signals.pairs, max(1, int(round(span / STRETCH_S))) + 1).astype(int)
     parts = [cut(signals, first, last) for first, last in zip(edges[:-1], edges[1:])]
-    return tuple(line for part in parts for axis in range(3) for line in _lines_of_axis(part, axis, px_per_1920))
+    return tuple(line for part in parts for line in _lines_of_stretch(part, px_per_1920))
+
+
+def _lines_of_stretch(part: RowSignals, px_per_1920: float) -> list[Line]:
+    """Lines of all axes, without what one axis' vibration leaks into another (lens and field of view are not known)."""
+    lines = [line for axis in range(3) for line in _lines_of_axis(part, axis, px_per_1920)]
+    width = 1.5 / float(part.next_time_s[-1] - part.time_s[0])
+    return [line for line in lines if not any(
+        other.axis != line.axis and abs(other.alias_hz - line.alias_hz) < width
+        and line.amplitude_px < TRACE_SHARE * other.amplitude_px for other in lines)]
 
 
 def _lines_of_axis(part: RowSignals, axis: int, px_per_1920: float) -> list[Line]:

@@ -23,7 +23,7 @@ import numpy as np
 from scipy.fft import fft, next_fast_len
 from scipy.ndimage import median_filter
 
-from framegrade.picture import CodingRhythm
+from framegrade.coding import CodingRhythm
 from framegrade.rows import RowSignals
 from framegrade.spectrum.response import Clock, difference_gain, difference_response, observable
 
