@@ -21,7 +21,7 @@ from framegrade import grading, screen
 from framegrade.camera import Camera
 from framegrade.coding import CodingRhythm, find_coding_rhythm
 from framegrade.footage import ClipInfo, FootageError, ReadFaults, probe, read_frames, timecode
-from framegrade.memory import keep_large_blocks
+from framegrade.memory import keep_large_blocks, release_free_memory
 from framegrade.motion import make_grid, measure_motion
 from framegrade.path import Path as PicturePath
 from framegrade.path import SHAKE_ABOVE_HZ, crop_needed_pct, split_path
@@ -148,6 +148,7 @@ def measure_clip(path: Path, settings: MeasureSettings | None = None,
     # one thread a library call: what runs side by side here are pairs of frames, and axes
     with threadpool_limits(1):
         signals, sizes = _read_signals(info, optics, workers, faults, progress)
+        release_free_memory()
         return assemble(info, optics, limits, signals, faults, find_coding_rhythm(sizes, info.frame_rate_hz), workers)
 
 
