@@ -139,7 +139,7 @@ def _count(text: str) -> int:
 def _grade(arguments: argparse.Namespace) -> int:
     from framegrade.pipeline import Interrupted, NoRoomError, UsageError, grade_all
     from framegrade.report.tables import run_json
-    from framegrade.report.terminal import make_console, make_watcher, outcome_words, print_run
+    from framegrade.report.terminal import make_console, make_watcher, print_run
     from framegrade.settings_file import SettingsError
 
     aside = make_console(sys.stderr)

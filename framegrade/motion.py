@@ -229,7 +229,7 @@ class _Solve:
     gradient_power: float
 
 
-def _solve_cells(first: np.ndarray, warped: np.ndarray, inside: np.ndarray | None, grid: Grid) -> _Solve:
+def _solve_cells(first: np.ndarray, warped: np.ndarray, grid: Grid) -> _Solve:
     """One Lucas-Kanade solve a cell: the shift r with warped(x + r) = first(x)."""
     mean = cv2.addWeighted(first, 0.5, warped, 0.5, 0.0)
     gx = cv2.sepFilter2D(mean, cv2.CV_32F, -DERIVE_TAPS, SMOOTH_TAPS)
@@ -250,8 +250,6 @@ def _solve_cells(first: np.ndarray, warped: np.ndarray, inside: np.ndarray | Non
     half_trace, half_gap = 0.5 * (xx + yy), np.sqrt(0.25 * (xx - yy) ** 2 + xy ** 2)
     smallest = (half_trace - half_gap) * count * _INDEPENDENT_SHARE / residual
     usable = smallest > MIN_CELL_INFORMATION
-    if inside is not None:
-        usable &= _cell_means(inside, grid) > 0.999
     information[~usable] = 0
     shift = np.stack([rx, ry], -1)
     shift[~usable] = 0
@@ -276,7 +274,7 @@ _INDEPENDENT_SHARE = 0.1
 MIN_CELL_INFORMATION = 1 / 0.08 ** 2
 
 
-def _warp_field(warp: np.ndarray, shift: np.ndarray, weight: np.ndarray, shape: tuple[int, int], grid: Grid) -> np.ndarray:
+def _warp_field(warp: np.ndarray, shift: np.ndarray, shape: tuple[int, int], grid: Grid) -> np.ndarray:
     """Dense map (H, W, 2) of `warp` plus a smooth interpolation of the cells' remaining shift."""
     height, width = shape
     x, y = np.meshgrid(np.arange(width, dtype=np.float32), np.arange(height, dtype=np.float32))
@@ -327,7 +325,7 @@ def measure_pair(first: _Picture, second: _Picture, grid: Grid) -> PairMotion:
         flags = cv2.INTER_LINEAR | cv2.WARP_INVERSE_MAP
         warped = cv2.warpPerspective(second.work, warp, shape[::-1], flags=flags, borderMode=cv2.BORDER_REPLICATE)
         inside = _inside_mask(warp, shape, grid)
-    solve = _solve_cells(first.work, warped, None, grid)
+    solve = _solve_cells(first.work, warped, grid)
     shift, information = solve.shift, solve.information
     centre = _cell_centres(grid)
     target = centre + shift
@@ -335,10 +333,10 @@ def measure_pair(first: _Picture, second: _Picture, grid: Grid) -> PairMotion:
         used = information[..., 0] > 0
         if not used.any() or np.percentile(np.abs(shift[used]), 90) < LINEAR_RANGE_PX:
             break
-        field = _warp_field(warp, _smooth_shift(shift, information[..., 0]), information[..., 0], shape, grid)
+        field = _warp_field(warp, _smooth_shift(shift, information[..., 0]), shape, grid)
         warped = cv2.remap(second.work, field[..., 0], field[..., 1], cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE)
         base = _sample_field(field, grid)
-        solve = _solve_cells(first.work, warped, None, grid)
+        solve = _solve_cells(first.work, warped, grid)
         information = solve.information
         target = None
         flow = base + solve.shift - centre

@@ -20,7 +20,6 @@ import os
 import re
 import shutil
 import signal
-import sys
 import time
 import traceback
 import unicodedata

@@ -17,7 +17,7 @@ Pati, Rezaiifar, Krishnaprasad (1993), "Orthogonal matching pursuit": refit all 
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 from scipy.fft import fft, next_fast_len
