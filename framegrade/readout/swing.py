@@ -54,13 +54,14 @@ LEAST_POWER_PX2 = 1e-8
 _SEARCH = np.linspace(-1.05, 1.05, 22)
 #: Frames over which the score's correlation is summed (Newey, West).
 _LAG_S = 0.15
-#: Standard deviation of what coding makes the picture lag, at one edge of it against the middle, native pixels; from
-#: rendered clips of 0.1 to 0.3 bits per pixel, against the same clips before coding.
-CODING_LAG_PX = 0.02
+#: What coding makes the picture lag, at one edge of it against the middle (standard deviation): this share of the
+#: errors that the lean shows on the axis that moves most, and this much at least, native pixels. From rendered clips
+#: of 0.06 to 0.3 bits per pixel, against the same clips before coding.
+LAG_SHARE, LEAST_LAG_PX = 0.5, 0.012
 #: Systematic part of the interval (95 %): of the readout, and of the frame interval; from tests/bench/readout.
 SYSTEMATIC_SHARE, SYSTEMATIC_FRAME = 0.003, 0.001
 #: An interval wider than this share of the readout and than this share of the frame interval says too little.
-WIDEST_SHARE, WIDEST_FRAME = 0.05, 0.02
+WIDEST_SHARE, WIDEST_FRAME = 0.05, 0.03
 #: Less motion than this from frame to frame (rms, native pixels) is no swing.
 LEAST_SWING_PX = 0.2
 #: Steady flow that differs over the height by more than this share of the swing is scenery passing by.
@@ -374,6 +375,8 @@ def _spread(stretches, made, models, readout, interval_s) -> _Fit:
     slopes = [(_over_time(s, _path_design(s, readout + step)) - _over_time(s, _path_design(s, readout - step))) / (2 * step)
               for s in stretches]
     lag = max(2, round(_LAG_S / interval_s))
+    speeds = np.sqrt(np.mean([s.observed[:, 0].var(0) for s in stretches], axis=0))
+    lag_px = float(np.hypot(LAG_SHARE * np.sqrt(models[int(np.argmax(speeds))].errors[1, 1]), LEAST_LAG_PX))
     shifts, variances, parts = [], [], []
     for axis, axis_parts in enumerate(made):
         total, information, summed = 0.0, 0.0, 0.0
@@ -391,8 +394,7 @@ def _spread(stretches, made, models, readout, interval_s) -> _Fit:
                 held = float(max(weight[half].sum(), 1e-30))
                 parts.append((axis, float(score[half].sum()) / held,
                               max(1 / held, _summed_variance(score[half], lag) / held ** 2)))
-        speed = float(np.sqrt(np.mean([s.observed[:, 0, axis].var() for s in stretches])))
-        sticking = CODING_LAG_PX / max(speed, 1e-9) * interval_s
+        sticking = lag_px / max(speeds[axis], 1e-9) * interval_s
         shifts.append(total / max(information, 1e-30))
         variances.append(max(1 / max(information, 1e-30), summed / max(information, 1e-30) ** 2) + sticking ** 2)
     weights = 1 / np.array(variances)

@@ -89,6 +89,10 @@ def cases() -> list[tuple[str, dict]]:
         readout = low + (high - low) * (i // 2) / 9
         out.append((f"swing {mode} {i:02d}", swing(mode, 400 + i, readout, rng)))
         out.append((f"flicker {mode} {i:02d}", lamp(mode, 500 + i, readout, rng)))
+    for i, mode in enumerate(("720p60", "1080p30") * 2):
+        thin = swing(mode, 430 + i, (8.0, 12.0, 14.0, 26.0)[i], rng)
+        thin["encode"]["bits_per_pixel"] = 0.06
+        out.append((f"thin swing {mode} {i}", thin))
     out.append(("swing global 720p60", swing("720p60", 420, 0.0, rng)))
     out.append(("flicker global 1080p30", lamp("1080p30", 520, 0.0, rng)))
 
@@ -108,9 +112,9 @@ def cases() -> list[tuple[str, dict]]:
         readout = float(rng.uniform(6, 15))
         base = {"flight": {**ahead, "duration_s": 8.0}, "sway": SWAY, "camera": {"exposure_ms": 0.5}}
         turn_hz = float(rng.uniform(90, 190))
-        motors = [{"count": 4, "axis": "yaw", "frequency_hz": turn_hz, "spread_pct": 5.0, "wander_pct": 0.5, "amplitude_deg": 0.03}]
+        motors = [{"count": 4, "axis": "yaw", "frequency_hz": turn_hz, "spread_pct": 8.0, "wander_pct": 0.5, "amplitude_deg": 0.05}]
         out.append((f"vibration motors {i}", recipe("360p60", 700 + i, readout, motors=motors, **base)))
-        tone = [{"axis": "pitch", "frequency_hz": turn_hz, "amplitude_deg": 0.06, "wander_pct": 3.0, "wander_time_s": 3.0}]
+        tone = [{"axis": "pitch", "frequency_hz": turn_hz, "amplitude_deg": 0.08, "wander_pct": 4.0, "wander_time_s": 3.0}]
         out.append((f"vibration throttle {i}", recipe("360p60", 710 + i, readout, tone=tone, **base)))
         shaft = [{"axis": "yaw", "frequency_hz": turn_hz * order, "amplitude_deg": 0.05 / order} for order in (1, 2)]
         out.append((f"vibration shaft {i}", recipe("360p60", 720 + i, readout, tone=shaft, **base)))
@@ -142,7 +146,7 @@ def run_case(job: tuple[str, dict, str]) -> dict:
             view = clips.turn_field_of_view(path, threads=1)
             told, ci = view.hfov_deg, view.hfov_ci_deg
         else:
-            if name.startswith("swing"):
+            if name.startswith(("swing", "thin swing")):
                 readout = clips.swing_readout(clips.read_motion(path, threads=1))
             elif name.startswith("flicker"):
                 readout = clips.flicker_readout(path, 100.0, threads=1)
@@ -166,6 +170,7 @@ def summary(table: pd.DataFrame) -> str:
              "|---|---|---|---|---|---|---|"]
     groups = [("swing clip of 4 s, " + m, f"swing {m}") for m in ("720p60", "1080p30")]
     groups += [("flicker clip of 2.5 s, " + m, f"flicker {m}") for m in ("720p60", "1080p30")]
+    groups += [("swing clip of 0.06 bits per pixel, " + m, f"thin swing {m}") for m in ("720p60", "1080p30")]
     groups += [("vibration: four motors of unlike speed", "vibration motors"), ("vibration: changing throttle", "vibration throttle"),
                ("vibration: two harmonics of one steady shaft", "vibration shaft"), ("field of view, full turn", "turn")]
     for label, start in groups:
