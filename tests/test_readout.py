@@ -43,12 +43,20 @@ def turned(time_s: np.ndarray, size_deg: float, speed_hz: float) -> Rotation:
     return Rotation.from_euler("yxz", np.stack([yaw, pitch, roll], -1), degrees=True)
 
 
-def swung_pairs(readout_s: float, rate: float = 30.0, duration_s: float = 4.0, *, size_deg: float = 3.5, speed_hz: float = 1.7,
-                noise_px: float = 0.03, seed: int = 0):
+def swung_pairs(
+    readout_s: float,
+    rate: float = 30.0,
+    duration_s: float = 4.0,
+    *,
+    size_deg: float = 3.5,
+    speed_hz: float = 1.7,
+    noise_px: float = 0.03,
+    seed: int = 0,
+):
     """Cell motion of far scenery seen by a swung rolling-shutter camera.
 
-    Every cell is a direction at the moment its row is exposed; where it lands in the next frame, and so when, is found by
-    fixed-point iteration. A frame's pictures of the cells are displaced by noise, part of it common to the frame.
+    Every cell is a direction at the moment its row is exposed; where it lands in the next frame, and so when, is found
+    by fixed-point iteration. A frame's pictures of the cells are displaced by noise, part of it common to the frame.
     """
     rng = np.random.default_rng(seed)
     grid = make_grid(WIDTH, HEIGHT)
@@ -155,8 +163,19 @@ def test_gaps_and_uneven_times_do_no_harm():
 # ------------------------------------------------------------------------------------------------------------ flicker
 
 
-def lamp_frames(readout_s: float, rate: float, flicker_hz: float, *, depth: float = 0.2, rectified: bool = False, count: int = 120,
-                rows: int = 240, noise: float = 1.0, exposure_s: float = 1e-3, seed: int = 0):
+def lamp_frames(
+    readout_s: float,
+    rate: float,
+    flicker_hz: float,
+    *,
+    depth: float = 0.2,
+    rectified: bool = False,
+    count: int = 120,
+    rows: int = 240,
+    noise: float = 1.0,
+    exposure_s: float = 1e-3,
+    seed: int = 0,
+):
     """Pictures of a wall under a lamp; the light of each row is the lamp's light curve averaged over its exposure.
 
     `rectified` makes the light the squared current's: |sin|, which has harmonics (Fourier: 4 / pi / (4 k^2 - 1)).
@@ -167,18 +186,33 @@ def lamp_frames(readout_s: float, rate: float, flicker_hz: float, *, depth: floa
     parts = (np.arange(16) + 0.5) / 16 - 0.5
     for n in range(count):
         t = n / rate + height[:, None] * readout_s + parts * exposure_s
-        light = np.abs(np.sin(np.pi * flicker_hz * t)) if rectified else 1 + depth * np.cos(2 * np.pi * flicker_hz * t + 0.7)
+        light = (
+            np.abs(np.sin(np.pi * flicker_hz * t))
+            if rectified
+            else 1 + depth * np.cos(2 * np.pi * flicker_hz * t + 0.7)
+        )
         light = (1 - depth + depth * light if rectified else light).mean(1)
         picture = wall * light[:, None] + noise * rng.normal(size=wall.shape)
         yield n / rate, np.clip(np.rint(picture), 0, 255).astype(np.uint8)
 
 
-@pytest.mark.parametrize("readout_ms, rate, flicker_hz", [
-    (5.0, 60.0, 100.0), (14.0, 60.0, 100.0), (16.0, 60.0, 100.0), (8.0, 30.0, 100.0), (32.0, 30.0, 100.0), (12.0, 50.0, 120.0),
-    (18.0, 30000 / 1001, 100.0), (10.0, 60.0, 1000.0),
-])
+@pytest.mark.parametrize(
+    "readout_ms, rate, flicker_hz",
+    [
+        (5.0, 60.0, 100.0),
+        (14.0, 60.0, 100.0),
+        (16.0, 60.0, 100.0),
+        (8.0, 30.0, 100.0),
+        (32.0, 30.0, 100.0),
+        (12.0, 50.0, 120.0),
+        (18.0, 30000 / 1001, 100.0),
+        (10.0, 60.0, 1000.0),
+    ],
+)
 def test_bands_of_a_lamp_tell_the_readout_time_within_one_per_cent(readout_ms, rate, flicker_hz):
-    found = measure_flicker(row_brightness(lamp_frames(readout_ms / 1e3, rate, flicker_hz, exposure_s=0.3 / flicker_hz)), flicker_hz)
+    found = measure_flicker(
+        row_brightness(lamp_frames(readout_ms / 1e3, rate, flicker_hz, exposure_s=0.3 / flicker_hz)), flicker_hz
+    )
     assert found.readout_s * 1e3 == pytest.approx(readout_ms, rel=0.01)
     assert abs(found.readout_s - readout_ms / 1e3) <= found.ci_s
 
@@ -232,7 +266,9 @@ def test_bands_that_run_against_the_rows_are_refused():
 RATE, BANDS_READOUT = 60.0, 0.014
 
 
-def rotor_signals(*parts, duration_s: float = 6.0, readout_s: float = BANDS_READOUT, noise_px: float = 0.03, axis: int = 0):
+def rotor_signals(
+    *parts, duration_s: float = 6.0, readout_s: float = BANDS_READOUT, noise_px: float = 0.03, axis: int = 0
+):
     motion = made.tones(*parts)
     return made.row_signals(motion, made.frame_times(RATE, duration_s), readout_s, noise_px=noise_px, axis=axis)
 
@@ -254,7 +290,9 @@ def test_rotors_of_unlike_speed_tell_the_readout_time():
 def test_a_changing_speed_tells_the_readout_time():
     motion = made.wandering_tone(140.0, 0.6, 4.0)
     signals = made.row_signals(motion, made.frame_times(RATE, 8.0), BANDS_READOUT, noise_px=0.03)
-    assert measure_vibration(spectral_lines(signals, 1 / 3), 1 / RATE).readout_s == pytest.approx(BANDS_READOUT, rel=0.015)
+    assert measure_vibration(spectral_lines(signals, 1 / 3), 1 / RATE).readout_s == pytest.approx(
+        BANDS_READOUT, rel=0.015
+    )
 
 
 def test_harmonics_of_one_steady_shaft_leave_exactly_the_rivals_of_the_fold():
@@ -294,8 +332,12 @@ def test_random_shafts_never_give_a_certain_false_answer():
         shaft, readout = rng.uniform(70, 200), rng.uniform(6, 15.5) / 1e3
         if abs(shaft - 30 * round(shaft / 30)) < 5:
             continue
-        lines = spectral_lines(rotor_signals((shaft, 0.4, 0.3), (2 * shaft, 0.2, 1.0), (3 * shaft, 0.1, 2.0), duration_s=4.0,
-                                             readout_s=readout), 1 / 3)
+        lines = spectral_lines(
+            rotor_signals(
+                (shaft, 0.4, 0.3), (2 * shaft, 0.2, 1.0), (3 * shaft, 0.1, 2.0), duration_s=4.0, readout_s=readout
+            ),
+            1 / 3,
+        )
         try:
             found = measure_vibration(lines, 1 / RATE)
         except CannotTell:
@@ -312,14 +354,25 @@ PAN_WIDTH, PAN_HEIGHT = 320, 180
 def panorama() -> np.ndarray:
     """Smooth random texture around a sphere: azimuth x elevation, a tenth of a degree a pixel."""
     rng = np.random.default_rng(8)
-    texture = sum(cv2.GaussianBlur(rng.normal(size=(1400, 3600)), (0, 0), s, borderType=cv2.BORDER_REFLECT) * s for s in (3, 6, 14))
+    texture = sum(
+        cv2.GaussianBlur(rng.normal(size=(1400, 3600)), (0, 0), s, borderType=cv2.BORDER_REFLECT) * s
+        for s in (3, 6, 14)
+    )
     texture[:, -80:] += (texture[:, :80] - texture[:, -80:]) * np.linspace(0, 1, 80)  # no seam where the turn closes
     return np.clip(128 + 45 * texture / texture.std(), 0, 255).astype(np.float32)
 
 
-def turn_frames(panorama, hfov_deg: float, degrees: float, *, tilt_deg: float = 0.0, count: int = 150, direction: int = 1,
-                wobble_deg: float = 0.6):
-    """Pictures of a pinhole camera turned about the vertical, with a little wobble: directions looked up in the panorama."""
+def turn_frames(
+    panorama,
+    hfov_deg: float,
+    degrees: float,
+    *,
+    tilt_deg: float = 0.0,
+    count: int = 150,
+    direction: int = 1,
+    wobble_deg: float = 0.6,
+):
+    """Pictures of a pinhole camera turned about the vertical, with a little wobble, looked up in the panorama."""
     focal = PAN_WIDTH / 2 / np.tan(np.radians(hfov_deg / 2))
     x, y = np.meshgrid(np.arange(PAN_WIDTH) + 0.5 - PAN_WIDTH / 2, np.arange(PAN_HEIGHT) + 0.5 - PAN_HEIGHT / 2)
     rays = np.stack([x, y, np.full_like(x, focal)], -1).reshape(-1, 3)
@@ -330,8 +383,13 @@ def turn_frames(panorama, hfov_deg: float, degrees: float, *, tilt_deg: float = 
         world = turn.inv().apply(rays)
         azimuth = np.degrees(np.arctan2(world[:, 0], world[:, 2])) % 360
         elevation = np.degrees(np.arcsin(world[:, 1] / np.linalg.norm(world, axis=1)))
-        sample = cv2.remap(panorama, (azimuth * 10).reshape(x.shape).astype(np.float32),
-                           (elevation * 10 + 700).reshape(x.shape).astype(np.float32), cv2.INTER_LINEAR, borderMode=cv2.BORDER_WRAP)
+        sample = cv2.remap(
+            panorama,
+            (azimuth * 10).reshape(x.shape).astype(np.float32),
+            (elevation * 10 + 700).reshape(x.shape).astype(np.float32),
+            cv2.INTER_LINEAR,
+            borderMode=cv2.BORDER_WRAP,
+        )
         yield n / 30, np.rint(sample).astype(np.uint8)
 
 
@@ -349,7 +407,7 @@ def test_a_turn_that_does_not_close_is_refused(panorama):
 
 
 def test_a_false_return_is_seen_by_the_shape_of_the_motion(panorama):
-    """Scenery that repeats after half a turn closes early; the picture then bends as another lens would make it bend."""
+    """Scenery that repeats after half a turn closes early; the picture then bends as through another lens."""
     twice = np.hstack([panorama[:, :1800]] * 2)
     twice[:, 1720:1800] += (twice[:, :80] - twice[:, 1720:1800]) * np.linspace(0, 1, 80)
     twice[:, 3520:] = twice[:, 1720:1800]
@@ -378,7 +436,11 @@ def test_the_command_writes_and_updates_a_camera_file(lamp_clip, tmp_path, capsy
     save_camera(Camera("nose", (kept, old)), out)
     assert cli.main(["readout", str(lamp_clip), "--flicker-hz", "100", "-o", str(out)]) == 0
     printed = capsys.readouterr().out
-    assert "lamp.mp4: 256x240@60: readout 14.0" in printed and "+-" in printed and "differs from the camera file's readout of 10 ms" in printed
+    assert (
+        "lamp.mp4: 256x240@60: readout 14.0" in printed
+        and "+-" in printed
+        and "differs from the camera file's readout of 10 ms" in printed
+    )
     camera = load_camera(out)
     assert camera.name == "nose" and camera.modes[0] == kept
     assert camera.modes[1].readout_s == pytest.approx(0.014, rel=0.01)
@@ -400,7 +462,9 @@ def test_a_clip_that_cannot_tell_is_exit_1_and_writes_nothing(tmp_path, capsys):
     assert cli.main(["readout", str(clip), "-o", str(out)]) == 1
     captured = capsys.readouterr()
     assert not out.exists() and "written" not in captured.out
-    assert captured.err.count("\n") == 1 and "still.mp4: as a swing clip" in captured.err and "as a flight" in captured.err
+    assert (
+        captured.err.count("\n") == 1 and "still.mp4: as a swing clip" in captured.err and "as a flight" in captured.err
+    )
 
 
 @pytest.mark.parametrize("arguments, words", [
@@ -428,7 +492,10 @@ def test_no_clip_and_a_broken_camera_file_are_exit_2(tmp_path, lamp_clip, capsys
 
 def test_clips_of_one_mode_are_joined_or_contradict(lamp_clip):
     info = probe(lamp_clip)
-    agree = [told("a", Readout(0.0140, 1e-4, "swing", 1 / 60), info), told("b", Readout(0.0141, 1e-4, "swing", 1 / 60), info)]
+    agree = [
+        told("a", Readout(0.0140, 1e-4, "swing", 1 / 60), info),
+        told("b", Readout(0.0141, 1e-4, "swing", 1 / 60), info),
+    ]
     (mode,) = command.combine(agree)
     assert mode.readout_s == pytest.approx(0.01405) and mode.readout_ci_ms == pytest.approx(0.1)
     with pytest.raises(CannotTell, match="a gives 14.000 and c 15.000 ms"):

@@ -179,4 +179,10 @@ def _fit_block(pairs: list[PairMotion], grid: Grid, focal_px: float):
         weight = np.where(used, np.clip(1 - ratio ** 2, 0, None) ** 2, 0)
     known = (weight > 0.1).sum(-1) >= MIN_CELLS_PER_BAND
     rise = np.einsum("nbk,bk->nb", fit, rotation_field(0 * grid.y_px, grid.y_px, focal_px, grid.width_px)[:, 1])
-    return np.where(known[..., None], fit, 0.0), known, np.where(known, rise / grid.height_px, 0.0), rest, used & known[..., None]
+    return (
+        np.where(known[..., None], fit, 0.0),
+        known,
+        np.where(known, rise / grid.height_px, 0.0),
+        rest,
+        used & known[..., None],
+    )

@@ -112,7 +112,9 @@ def vibration_lines(motion: Motion) -> tuple[Line, ...]:
     bad = _disturbed(motion, signals.whole_px[:, :2])
     fast, variance = signals.fast_px.copy(), signals.variance_px2.copy()
     fast[bad], variance[bad] = np.nan, np.inf
-    return spectral_lines(replace(signals, fast_px=fast, variance_px2=variance), motion.info.width_px / REFERENCE_WIDTH_PX)
+    return spectral_lines(
+        replace(signals, fast_px=fast, variance_px2=variance), motion.info.width_px / REFERENCE_WIDTH_PX
+    )
 
 
 def vibration_readout(lines: tuple[Line, ...], interval_s: float) -> Readout:

@@ -160,7 +160,8 @@ def _wrong_use(args: argparse.Namespace) -> str | None:
     if args.pan_turn and (args.method != "auto" or args.flicker_hz is not None):
         return "--pan-turn measures the field of view and goes with neither --method nor --flicker-hz"
     if args.method == "flicker" and args.flicker_hz is None:
-        return "--method flicker needs the lamp's flicker frequency: add --flicker-hz 100 (or 120), twice the mains frequency"
+        return ("--method flicker needs the lamp's flicker frequency: add --flicker-hz 100 (or 120), "
+                "twice the mains frequency")
     if args.method in ("swing", "vibration") and args.flicker_hz is not None:
         return f"--flicker-hz does not go with --method {args.method}"
     if args.camera_name is not None and args.out is None:
@@ -173,7 +174,7 @@ def _complain(message: object, status: int = SOME_FAILED) -> int:
     return status
 
 
-# --- measuring -----------------------------------------------------------------------------------------------------------
+# --- measuring ---------------------------------------------------------------------------------------------------
 
 
 def measure_all(paths: Sequence[Path], args: argparse.Namespace) -> tuple[list[Measured], int]:
@@ -260,15 +261,14 @@ def sentence(measured: Measured) -> str:
         return (f"{head}: horizontal field of view {figure.hfov_deg:.2f} +- {figure.hfov_ci_deg:.2f} degrees "
                 f"(turn of {figure.turn_s:.1f} s)")
     if figure.global_shutter:
-        return f"{head}: global shutter (readout 0, less than {1e3 * _most(figure):.2g} ms; {figure.method}: {figure.basis})"
-    return f"{head}: readout {figure.readout_s * 1e3:.3f} +- {figure.ci_s * 1e3:.3f} ms ({figure.method}: {figure.basis})"
+        most_ms = 1e3 * (abs(figure.readout_s) + figure.ci_s)
+        return f"{head}: global shutter (readout 0, less than {most_ms:.2g} ms; {figure.method}: {figure.basis})"
+    return (
+        f"{head}: readout {figure.readout_s * 1e3:.3f} +- {figure.ci_s * 1e3:.3f} ms ({figure.method}: {figure.basis})"
+    )
 
 
-def _most(readout: Readout) -> float:
-    return abs(readout.readout_s) + readout.ci_s
-
-
-# --- the camera file -----------------------------------------------------------------------------------------------------
+# --- the camera file ---------------------------------------------------------------------------------------------
 
 
 def combine(told: Sequence[Measured]) -> list[CameraMode]:
@@ -320,8 +320,10 @@ def _mean(figures: list[tuple[str, float, float]], mode: str, unit: str) -> tupl
     mean = float((weights * values).sum() / weights.sum())
     low, high = int(np.argmin(values)), int(np.argmax(values))
     if values[high] - values[low] > AGREEMENT * np.hypot(cis[low], cis[high]):
-        raise CannotTell(f"the clips of {mode} contradict each other: {shown(figures[low][0])} gives {values[low]:.3f} and "
-                         f"{shown(figures[high][0])} {values[high]:.3f} {unit}, so nothing is written")
+        raise CannotTell(
+            f"the clips of {mode} contradict each other: {shown(figures[low][0])} gives {values[low]:.3f} and "
+            f"{shown(figures[high][0])} {values[high]:.3f} {unit}, so nothing is written"
+        )
     return mean, float(cis.min())
 
 
@@ -348,7 +350,9 @@ def _comparison(camera: Camera | None, modes: Sequence[CameraMode]) -> list[str]
         if mode.readout_s is not None and old.readout_s is not None:
             before, now = old.readout_s * 1e3, mode.readout_s * 1e3
             stated = old.readout_ci_ms if old.readout_ci_ms is not None else STATED_SHARE * before
-            lines.append(_compared(mode.label, "readout", before, now, float(np.hypot(stated, mode.readout_ci_ms)), "ms"))
+            lines.append(
+                _compared(mode.label, "readout", before, now, float(np.hypot(stated, mode.readout_ci_ms)), "ms")
+            )
     return lines
 
 
@@ -356,7 +360,8 @@ def _compared(label: str, what: str, before: float, now: float, allowed: float, 
     if abs(now - before) <= allowed:
         return f"{label}: agrees with the camera file's {what} of {before:.4g} {unit}"
     share = f" ({100 * (now / before - 1):+.1f} %)" if before else ""
-    return f"{label}: differs from the camera file's {what} of {before:.4g} {unit}{share}; the measured figure takes its place"
+    return (f"{label}: differs from the camera file's {what} of {before:.4g} {unit}{share}; "
+            "the measured figure takes its place")
 
 
 def update(camera: Camera | None, modes: Sequence[CameraMode], name: str | None) -> Camera:

@@ -183,7 +183,9 @@ class _Follower:
             raise CannotTell("holds no frame", _INSTEAD)
         if self.match is None:
             if self.lost_s is not None:
-                raise CannotTell(f"the picture cannot be followed at {self.lost_s:.1f} s (too little texture, or too fast)", _INSTEAD)
+                raise CannotTell(
+                    f"the picture cannot be followed at {self.lost_s:.1f} s (too little texture, or too fast)", _INSTEAD
+                )
             widths = self.farthest_px / self.first.shape[1]
             raise CannotTell(f"its first view does not come back (the picture moved by {widths:.1f} of its widths): "
                              "the turn is not closed", _INSTEAD)
@@ -191,11 +193,17 @@ class _Follower:
         return _Turn((*self.links[:self.match.links], self.match.link), closing, self.match.time_s - self.start_s)
 
     def _prepare(self, luma: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        grey = cv2.convertScaleAbs(luma, alpha=self.luma_scale) if luma.dtype != np.uint8 or self.luma_scale != 1 else luma
+        grey = (
+            cv2.convertScaleAbs(luma, alpha=self.luma_scale) if luma.dtype != np.uint8 or self.luma_scale != 1 else luma
+        )
         self.width_px, self.height_px = luma.shape[1], luma.shape[0]
         self.scale = min(1.0, WORKING_WIDTH_PX / self.width_px)
         small = THUMB_WIDTH_PX / self.width_px
-        work = cv2.resize(grey, None, fx=self.scale, fy=self.scale, interpolation=cv2.INTER_AREA) if self.scale < 1 else grey.copy()
+        work = (
+            cv2.resize(grey, None, fx=self.scale, fy=self.scale, interpolation=cv2.INTER_AREA)
+            if self.scale < 1
+            else grey.copy()
+        )
         return work, cv2.resize(work, None, fx=small / self.scale, fy=small / self.scale, interpolation=cv2.INTER_AREA)
 
     def _begin_key(self, work: np.ndarray) -> None:
@@ -255,11 +263,20 @@ class _Follower:
         ------
         CannotTell
         """
-        points = cv2.goodFeaturesToTrack(self.first, 2 * MOST_POINTS, 0.01, max(4, self.first.shape[1] // 80), blockSize=5)
+        points = cv2.goodFeaturesToTrack(
+            self.first, 2 * MOST_POINTS, 0.01, max(4, self.first.shape[1] // 80), blockSize=5
+        )
         if points is not None:
             guess = points + self.match.shift_px.astype(np.float32)
             at, found, _ = cv2.calcOpticalFlowPyrLK(
-                self.first, self.match.work, points, guess, winSize=(31, 31), maxLevel=3, flags=cv2.OPTFLOW_USE_INITIAL_FLOW)
+                self.first,
+                self.match.work,
+                points,
+                guess,
+                winSize=(31, 31),
+                maxLevel=3,
+                flags=cv2.OPTFLOW_USE_INITIAL_FLOW,
+            )
             good = found.ravel() == 1
             if good.sum() >= CLOSING_POINTS:
                 link = _inliers(self._native(points[good]), self._native(at[good]), 2.0 / self.scale)
@@ -277,7 +294,7 @@ def _inliers(first: np.ndarray, second: np.ndarray, tolerance_px: float) -> _Lin
     return _Link(first[keep], second[keep])
 
 
-# --- closing the turn ---------------------------------------------------------------------------------------------------
+# --- closing the turn --------------------------------------------------------------------------------------------
 
 
 def _directions(points_px: np.ndarray, focal_px: float) -> np.ndarray:
@@ -333,5 +350,8 @@ def _refuse_other_shape(turn: _Turn, focal_px: float) -> None:
     best = int(np.argmin(rest))
     middle = len(_SHAPE_FACTORS) // 2
     if abs(best - middle) > 1 and rest[best] < 0.7 * rest[middle]:
-        raise CannotTell("the picture does not move as one turn in place would move it: it turned more or less than once, "
-                         "or the camera travelled", _INSTEAD)
+        raise CannotTell(
+            "the picture does not move as one turn in place would move it: it turned more or less than once, "
+            "or the camera travelled",
+            _INSTEAD,
+        )

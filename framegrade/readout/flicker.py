@@ -1,9 +1,9 @@
 """Readout time from the bands that a flickering lamp leaves in the picture.
 
-Lamps on alternating current flicker at twice the mains frequency (100 or 120 Hz: common practice). With rows exposed one
-after the other, the brightness of row i of frame n follows the lamp at `t = pts_n + ((i + 1/2) / H - 1/2) R`: R f cycles
-stand over the height of the picture, and they move from frame to frame by the lamp's alias. The alias pins the lamp's
-true frequency on the camera's own clock, the cycles then give R.
+Lamps on alternating current flicker at twice the mains frequency (100 or 120 Hz: common practice). With rows exposed
+one after the other, the brightness of row i of frame n follows the lamp at `t = pts_n + ((i + 1/2) / H - 1/2) R`: R f
+cycles stand over the height of the picture, and they move from frame to frame by the lamp's alias. The alias pins the
+lamp's true frequency on the camera's own clock, the cycles then give R.
 
 Sources
 -------
@@ -131,16 +131,26 @@ def measure_flicker(brightness: RowBrightness, flicker_hz: float) -> Readout:
         raise CannotTell(f"the bands seen do not move as a {flicker_hz:g} Hz flicker makes them", _advice(flicker_hz))
     readout = fit.cycles / fit.frequency_hz
     sigma = fit.cycles_sigma / fit.frequency_hz
-    ci = float(np.sqrt((STUDENT_95 * sigma) ** 2 + (SYSTEMATIC_SHARE * readout) ** 2 + (SYSTEMATIC_FRAME * interval) ** 2))
+    ci = float(
+        np.sqrt((STUDENT_95 * sigma) ** 2 + (SYSTEMATIC_SHARE * readout) ** 2 + (SYSTEMATIC_FRAME * interval) ** 2)
+    )
     if ci > max(WIDEST_SHARE * abs(readout), WIDEST_FRAME * interval):
-        raise CannotTell(f"the bands are too faint or too disturbed to count (the estimate is good to {ci * 1e3:.2g} ms only)",
-                         _INSTEAD)
+        raise CannotTell(
+            f"the bands are too faint or too disturbed to count (the estimate is good to {ci * 1e3:.2g} ms only)",
+            _INSTEAD,
+        )
     if readout < -ci:
-        raise CannotTell(f"the bands run against the rows' order: the flicker is not {flicker_hz:g} Hz, or the camera writes its "
-                         "picture turned over, which this measurement does not cover", _advice(flicker_hz))
+        raise CannotTell(
+            f"the bands run against the rows' order: the flicker is not {flicker_hz:g} Hz, or the camera writes its "
+            "picture turned over, which this measurement does not cover",
+            _advice(flicker_hz),
+        )
     if readout > 1.01 * interval + ci:
-        raise CannotTell(f"the bands are those of a readout longer than the {interval * 1e3:.3g} ms from frame to frame: "
-                         f"the flicker is not {flicker_hz:g} Hz", _advice(flicker_hz))
+        raise CannotTell(
+            f"the bands are those of a readout longer than the {interval * 1e3:.3g} ms from frame to frame: "
+            f"the flicker is not {flicker_hz:g} Hz",
+            _advice(flicker_hz),
+        )
     basis = f"{fit.cycles:.3g} bands of {100 * fit.depth:.2g} % a frame height, lamp at {fit.frequency_hz:.2f} Hz"
     return Readout(float(readout), ci, "flicker", interval, basis)
 
@@ -156,7 +166,9 @@ def _without(series: np.ndarray, trend: np.ndarray) -> np.ndarray:
     return series - trend @ (trend.T @ series)
 
 
-def _search(ratio: np.ndarray, time: np.ndarray, moment: np.ndarray, flicker_hz: float, interval: float) -> tuple[float, float]:
+def _search(
+    ratio: np.ndarray, time: np.ndarray, moment: np.ndarray, flicker_hz: float, interval: float
+) -> tuple[float, float]:
     """Frequency and cycles over the height at the peak of the periodogram near the lamp's frequency.
 
     Raises
@@ -174,15 +186,20 @@ def _search(ratio: np.ndarray, time: np.ndarray, moment: np.ndarray, flicker_hz:
     power = _power(ratio, time, moment, near, cycles)
     peak = float(power.max())
     # neighbours: what else moves through the picture at about this speed
-    beside = flicker_hz + np.concatenate([-reach - 2 / span - np.arange(0, 4, 4 * step), reach + 2 / span + np.arange(0, 4, 4 * step)])
+    beside = flicker_hz + np.concatenate(
+        [-reach - 2 / span - np.arange(0, 4, 4 * step), reach + 2 / span + np.arange(0, 4, 4 * step)]
+    )
     folded = np.abs(beside - rate * np.round(beside / rate))
     mirrored = np.abs(folded - alias) < reach + 2 / span  # the same line read from its mirror image
     beside = beside[~mirrored] if (~mirrored).sum() > 8 else beside
     ground = float(np.median(_power(ratio, time, moment, beside, cycles).max(1)))
     if peak < LEAST_POWER_RATIO * ground:
         if alias < 1.5 / span + reach:
-            raise CannotTell(f"at {rate:.4g} frames/s the bands of a {flicker_hz:g} Hz flicker (nearly) stand still and cannot be "
-                             "told from the scene", "film longer, or measure this mode with --method swing")
+            raise CannotTell(
+                f"at {rate:.4g} frames/s the bands of a {flicker_hz:g} Hz flicker (nearly) stand still and cannot be "
+                "told from the scene",
+                "film longer, or measure this mode with --method swing",
+            )
         raise CannotTell(f"no bands of a {flicker_hz:g} Hz flicker can be seen", _advice(flicker_hz))
     i, j = np.unravel_index(int(np.argmax(power)), power.shape)
     return float(near[i]), float(cycles[j])
@@ -204,7 +221,7 @@ class _Fit:
 
 
 def _refine(ratio, time, moment, trend, frequency, cycles, interval) -> _Fit:
-    """Gauss-Newton on frequency and cycles, with a fundamental and its harmonic; then the cycles' standard deviation."""
+    """Gauss-Newton on frequency and cycles, fundamental and harmonic together; then the cycles' standard deviation."""
     harmonics = _separable_harmonics(frequency, cycles, interval, float(np.ptp(time)))
     for turn in range(_TURNS):
         design, coefficients = _waves(ratio, time, moment, trend, frequency, cycles, harmonics)

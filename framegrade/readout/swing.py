@@ -119,19 +119,29 @@ def measure_swing(motion: BandMotion) -> Readout:
     _refuse_no_swing(stretches)
     fit = _fit(stretches, interval)
     readout, sigma = fit.readout_s, fit.sigma_s
-    ci = float(np.sqrt((NORMAL_95 * sigma) ** 2 + (SYSTEMATIC_SHARE * readout) ** 2 + (SYSTEMATIC_FRAME * interval) ** 2))
+    ci = float(
+        np.sqrt((NORMAL_95 * sigma) ** 2 + (SYSTEMATIC_SHARE * readout) ** 2 + (SYSTEMATIC_FRAME * interval) ** 2)
+    )
     swing = _swing_px(stretches)
     if ci > max(WIDEST_SHARE * abs(readout), WIDEST_FRAME * interval):
-        raise CannotTell(f"the camera moves too little or too unlike a swing to show the readout time (the estimate is good "
-                         f"to {ci * 1e3:.2g} ms only)", _INSTEAD)
+        raise CannotTell(
+            f"the camera moves too little or too unlike a swing to show the readout time (the estimate is good "
+            f"to {ci * 1e3:.2g} ms only)",
+            _INSTEAD,
+        )
     if fit.contradiction > _CONTRADICTION:
-        raise CannotTell(f"parts of the clip contradict each other about the readout time "
-                         f"({fit.contradiction:.2g} standard deviations apart): something in the scene moves or is near", _INSTEAD)
+        raise CannotTell(
+            f"parts of the clip contradict each other about the readout time "
+            f"({fit.contradiction:.2g} standard deviations apart): something in the scene moves or is near",
+            _INSTEAD,
+        )
     if readout < -ci:
         raise CannotTell("the rows run from bottom to top: the camera writes its picture turned over, "
                          "which this measurement does not cover", "switch the camera's picture flip off")
     if readout > 1.01 * interval + ci:
-        raise CannotTell(f"the readout time comes out longer than the {interval * 1e3:.3g} ms from frame to frame", _INSTEAD)
+        raise CannotTell(
+            f"the readout time comes out longer than the {interval * 1e3:.3g} ms from frame to frame", _INSTEAD
+        )
     return Readout(float(readout), ci, "swing", interval, f"{swing:.3g} px from frame to frame, rms")
 
 
@@ -150,7 +160,9 @@ def _stretches(motion: BandMotion) -> list[_Stretch]:
     reach = motion.height[lasting]
     spacing = float(np.diff(motion.height[:2])[0])
     if lasting.sum() < 2 * TERMS or np.ptp(reach) + spacing < LEAST_HEIGHT:
-        raise CannotTell(f"only {100 * lasting.mean():.0f} % of the picture's height has texture that can be followed", _INSTEAD)
+        raise CannotTell(
+            f"only {100 * lasting.mean():.0f} % of the picture's height has texture that can be followed", _INSTEAD
+        )
     use = motion.known[:, lasting].mean(1) >= LEAST_BANDS
     span = use.sum() * motion.interval_s
     if span < SHORTEST_S:
@@ -170,7 +182,9 @@ def _stray_bands(motion: BandMotion) -> np.ndarray:
         normal = np.einsum("nb,bi,bj->nij", use.astype(float), shape, shape) + 1e-6 * np.eye(shape.shape[1])
         right = np.einsum("bi,nb,nbk->nik", shape, use.astype(float), motion.motion_px)
         rest = motion.motion_px - np.einsum("bi,nik->nbk", shape, np.linalg.solve(normal, right))
-        scale = np.array([np.median(np.abs(rest[use][:, axis])) for axis in range(3)]) / 0.6745 if use.any() else np.ones(3)
+        scale = (
+            np.array([np.median(np.abs(rest[use][:, axis])) for axis in range(3)]) / 0.6745 if use.any() else np.ones(3)
+        )
         stray = (np.abs(rest) > STRAY_LIMIT * np.maximum(scale, 1e-3)).any(-1)
         use = motion.known & ~stray
     return stray
@@ -198,10 +212,10 @@ def _stretch(motion: BandMotion, index: np.ndarray, bands: np.ndarray) -> _Stret
 
 
 def _nuisance(observed: np.ndarray) -> tuple[np.ndarray, ...]:
-    """What else may be in the terms of each axis: a constant each, and a share of the axis' own level in lean and curvature.
+    """What else may be in the terms of each axis: a constant each, and a share of its own level in lean and curvature.
 
-    The constants are steady flow. The shares are what a wrong field of view, lens distortion or near scenery make of the
-    swing: they go with its speed, while the readout time goes with its acceleration.
+    The constants are steady flow. The shares are what a wrong field of view, lens distortion or near scenery make of
+    the swing: they go with its speed, while the readout time goes with its acceleration.
     """
     pairs, axes = observed.shape[0], observed.shape[2]
     level = observed[:, 0] - observed[:, 0].mean(0)
@@ -303,7 +317,7 @@ class _Axis:
         return _Solved(objective + 2 * float(np.log(np.diag(factor[0])).sum()), solution, factor, design, rest, penalty)
 
     def moments(self, solved: _Solved) -> tuple[np.ndarray, np.ndarray]:
-        """Expected sums of squares given the data (EM): of the terms' errors (terms, terms), of each path coefficient."""
+        """Expected sums of squares given the data (EM): of the terms' errors (terms, terms), of every coefficient."""
         rest = self.data[..., 0] - self.design @ solved.solution
         inverse = cho_solve(solved.factor, np.eye(len(solved.solution)), check_finite=False)
         spread = np.einsum("nim,njm->ij", self.design @ inverse, self.design, optimize=True)
@@ -313,7 +327,7 @@ class _Axis:
 
 @dataclass(frozen=True)
 class _Model:
-    """What one axis is made of: covariance of the terms' errors (px^2), mean square path coefficient of each band (px^2)."""
+    """What one axis is made of: covariance of the terms' errors, mean square path coefficient of each band; px^2."""
 
     errors: np.ndarray
     power: np.ndarray
@@ -322,7 +336,9 @@ class _Model:
 def _fit(stretches: list[_Stretch], interval_s: float) -> _Fit:
     axes = range(stretches[0].observed.shape[2])
     # The search begins with errors taken as small: with large ones a wrong readout would explain them, and stay.
-    models = [_Model(_FIRST_ERROR_PX ** 2 * np.eye(TERMS), np.full(len(_POWER_EDGES_HZ) - 1, _FIRST_POWER_PX2)) for _ in axes]
+    models = [
+        _Model(_FIRST_ERROR_PX**2 * np.eye(TERMS), np.full(len(_POWER_EDGES_HZ) - 1, _FIRST_POWER_PX2)) for _ in axes
+    ]
 
     def parts(readout: float) -> list[list[_Axis]]:
         paths = [_over_time(s, _path_design(s, readout)) for s in stretches]
@@ -372,8 +388,10 @@ def _spread(stretches, made, models, readout, interval_s) -> _Fit:
     differs over the height looks like a readout time; fast motion outruns it.
     """
     step = 1e-3 * interval_s
-    slopes = [(_over_time(s, _path_design(s, readout + step)) - _over_time(s, _path_design(s, readout - step))) / (2 * step)
-              for s in stretches]
+    slopes = [
+        (_over_time(s, _path_design(s, readout + step)) - _over_time(s, _path_design(s, readout - step))) / (2 * step)
+        for s in stretches
+    ]
     lag = max(2, round(_LAG_S / interval_s))
     speeds = np.sqrt(np.mean([s.observed[:, 0].var(0) for s in stretches], axis=0))
     lag_px = float(np.hypot(LAG_SHARE * np.sqrt(models[int(np.argmax(speeds))].errors[1, 1]), LEAST_LAG_PX))

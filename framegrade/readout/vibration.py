@@ -188,29 +188,38 @@ def _climb(level: np.ndarray, height: np.ndarray, cycles: float) -> float:
     """Top of the power between grid points: parabolas of shrinking step."""
     step = _CYCLES_STEP
     for _ in range(8):
-        low, middle, high = (abs(level @ np.exp(-2j * np.pi * height * c)) ** 2 for c in (cycles - step, cycles, cycles + step))
+        low, middle, high = (
+            abs(level @ np.exp(-2j * np.pi * height * c)) ** 2 for c in (cycles - step, cycles, cycles + step)
+        )
         curve = low - 2 * middle + high
-        cycles += step * (float(np.clip(0.5 * (low - high) / curve, -1, 1)) if curve < 0 else float(np.sign(high - low)))
+        cycles += step * (
+            float(np.clip(0.5 * (low - high) / curve, -1, 1)) if curve < 0 else float(np.sign(high - low))
+        )
         step /= 2
     return cycles
 
 
 def _is_trace(alias: float, strong: float, rate: float, width: float) -> bool:
-    """True at the strong line's mirror image, or half a frame rate beside it or its image (encoders alternate frames)."""
+    """True at the strong line's mirror image, or half a frame rate beside it (encoders alternate frames)."""
     half = rate / 2
     return abs(alias + strong - half) < width or abs(abs(alias - strong) - half) < width
 
 
 def _bundles(lines: Sequence[Line]) -> list[list[Line]]:
-    """Lines that belong to one vibration: each near another in alias and in cycles, whatever the axis and the stretch."""
+    """Lines that belong to one vibration: each near another in alias and cycles, whatever the axis and stretch."""
     left, out = list(lines), []
     while left:
         bundle, queue = [], [left.pop(0)]
         while queue:
             line = queue.pop()
             bundle.append(line)
-            near = [other for other in left if abs(other.alias_hz - line.alias_hz) <= _LINK_HZ
-                    and abs(other.cycles - line.cycles) <= _LINK_CYCLES + 2 * np.hypot(other.cycles_sigma, line.cycles_sigma)]
+            near = [
+                other
+                for other in left
+                if abs(other.alias_hz - line.alias_hz) <= _LINK_HZ
+                and abs(other.cycles - line.cycles)
+                <= _LINK_CYCLES + 2 * np.hypot(other.cycles_sigma, line.cycles_sigma)
+            ]
             queue += near
             left = [other for other in left if other not in near]
         out.append(bundle)
@@ -248,8 +257,8 @@ def weigh_readouts(lines: Sequence[Line], interval_s: float) -> list[Rival]:
             expected = grid[:, None] * (line.alias_hz + orders * rate)
             together += np.logaddexp(scale - 0.5 * ((line.cycles - expected) / sigma) ** 2, stray)
             still += float(np.logaddexp(scale - 0.5 * (line.cycles / sigma) ** 2, stray))
-        # One prior for the whole bundle. Frequencies are spread evenly over octaves: if evenly over hertz, a low readout
-        # would be favoured for nothing but the narrow span of cycles it makes of them.
+        # One prior for the whole bundle. Frequencies are spread evenly over octaves: if evenly over hertz, a low
+        # readout would be favoured for nothing but the narrow span of cycles it makes of them.
         frequency = np.abs(bundle[0].alias_hz + orders * rate)
         prior = -np.log(np.maximum(frequency, LOWEST_ALIAS_HZ))
         logs += logsumexp(together + prior - logsumexp(prior), axis=1)
@@ -272,7 +281,11 @@ def _peaks(grid: np.ndarray, mass: np.ndarray) -> list[Rival]:
     for first, last in zip(edges[::2], edges[1::2]):
         m, r = mass[first:last], grid[first:last]
         mean = float((m * r).sum() / m.sum())
-        out.append(Rival(mean, float(np.sqrt((m * (r - mean) ** 2).sum() / m.sum() + (_STEP * mean) ** 2 / 12)), float(m.sum())))
+        out.append(
+            Rival(
+                mean, float(np.sqrt((m * (r - mean) ** 2).sum() / m.sum() + (_STEP * mean) ** 2 / 12)), float(m.sum())
+            )
+        )
     return out
 
 

@@ -5,8 +5,8 @@ Run from the project's top folder (about half an hour on two cores)::
     python -m tests.bench.readout             # writes tests/bench/readout.csv and readout.md
     python -m tests.bench.readout --only turn # cases whose name contains "turn"
 
-Every clip is seeded, rendered to a temporary folder and deleted when measured. Each row of readout.csv is one clip: what
-was true, what was told, the stated 95 % half-width, or why the clip could not tell.
+Every clip is seeded, rendered to a temporary folder and deleted when measured. Each row of readout.csv is one clip:
+what was true, what was told, the stated 95 % half-width, or why the clip could not tell.
 """
 
 from __future__ import annotations
@@ -26,7 +26,11 @@ from framegrade.simulate import flight_from_dict, render
 
 HERE = Path(__file__).parent
 #: Width, height, frame rate, and range of readout times in milliseconds.
-MODES = {"720p60": (1280, 720, 60, (5.0, 16.0)), "1080p30": (1920, 1080, 30, (5.0, 32.0)), "360p60": (640, 360, 60, (5.0, 16.0))}
+MODES = {
+    "720p60": (1280, 720, 60, (5.0, 16.0)),
+    "1080p30": (1920, 1080, 30, (5.0, 32.0)),
+    "360p60": (640, 360, 60, (5.0, 16.0)),
+}
 AXES = ("yaw", "pitch", "roll")
 
 
@@ -68,15 +72,24 @@ def swing(mode: str, seed: int, readout_ms: float, rng: np.random.Generator) -> 
 
 def lamp(mode: str, seed: int, readout_ms: float, rng: np.random.Generator) -> dict:
     """A plain wall under a lamp, the camera held by hand."""
-    return recipe(mode, seed, readout_ms, lamp={"flicker_hz": 100.0 * rng.uniform(0.999, 1.001), "depth": rng.uniform(0.05, 0.4)},
-                  broadband=hand(rng.uniform(0.01, 0.06), 8.0), scene={"kind": "backdrop", "distance_m": 2.0,
-                                                                      "contrast": rng.uniform(2, 10), "brightness": 150.0},
-                  camera={"hfov_deg": rng.uniform(60, 105), "exposure_ms": rng.uniform(0.3, 3.0)},
-                  flight={"tilt_deg": 0.0, "duration_s": 2.5}, encode={"bits_per_pixel": rng.uniform(0.1, 0.3)})
+    return recipe(
+        mode,
+        seed,
+        readout_ms,
+        lamp={"flicker_hz": 100.0 * rng.uniform(0.999, 1.001), "depth": rng.uniform(0.05, 0.4)},
+        broadband=hand(rng.uniform(0.01, 0.06), 8.0),
+        scene={"kind": "backdrop", "distance_m": 2.0, "contrast": rng.uniform(2, 10), "brightness": 150.0},
+        camera={"hfov_deg": rng.uniform(60, 105), "exposure_ms": rng.uniform(0.3, 3.0)},
+        flight={"tilt_deg": 0.0, "duration_s": 2.5},
+        encode={"bits_per_pixel": rng.uniform(0.1, 0.3)},
+    )
 
 
-SWAY = [{"axis": "yaw", "frequency_hz": 0.8, "amplitude_deg": 0.4}, {"axis": "pitch", "frequency_hz": 1.7, "amplitude_deg": 0.2},
-        {"axis": "roll", "frequency_hz": 1.2, "amplitude_deg": 0.15}]
+SWAY = [
+    {"axis": "yaw", "frequency_hz": 0.8, "amplitude_deg": 0.4},
+    {"axis": "pitch", "frequency_hz": 1.7, "amplitude_deg": 0.2},
+    {"axis": "roll", "frequency_hz": 1.2, "amplitude_deg": 0.15},
+]
 
 
 def cases() -> list[tuple[str, dict]]:
@@ -102,19 +115,38 @@ def cases() -> list[tuple[str, dict]]:
                {"axis": "heading", "rate_deg_per_s": -25.0, "start_s": 2.5, "stop_s": 4.0, "ramp_s": 0.3}]
     for mode, readout in (("720p60", 14.0), ("1080p30", 24.0)):
         seed = 600 if mode == "720p60" else 610
-        out.append((f"refuse flight {mode}", recipe(mode, seed, readout, flight=ahead, sway=SWAY, broadband=hand(0.01))))
-        out.append((f"refuse rough flight {mode}", recipe(mode, seed + 1, readout, flight={"speed_mps": 7.0}, sway=big)))
-        out.append((f"refuse turning flight {mode}", recipe(mode, seed + 2, readout, flight=ahead, sway=SWAY, pan=turning)))
+        out.append(
+            (f"refuse flight {mode}", recipe(mode, seed, readout, flight=ahead, sway=SWAY, broadband=hand(0.01)))
+        )
+        out.append(
+            (f"refuse rough flight {mode}", recipe(mode, seed + 1, readout, flight={"speed_mps": 7.0}, sway=big))
+        )
+        out.append(
+            (f"refuse turning flight {mode}", recipe(mode, seed + 2, readout, flight=ahead, sway=SWAY, pan=turning))
+        )
         out.append((f"refuse hover {mode}", recipe(mode, seed + 3, readout, sway=SWAY)))
-        out.append((f"refuse still, cars {mode}", recipe(mode, seed + 4, readout, cars=[{"count": 25, "direction": "both"}])))
+        out.append(
+            (f"refuse still, cars {mode}", recipe(mode, seed + 4, readout, cars=[{"count": 25, "direction": "both"}]))
+        )
 
     for i in range(4):
         readout = float(rng.uniform(6, 15))
         base = {"flight": {**ahead, "duration_s": 8.0}, "sway": SWAY, "camera": {"exposure_ms": 0.5}}
         turn_hz = float(rng.uniform(90, 190))
-        motors = [{"count": 4, "axis": "yaw", "frequency_hz": turn_hz, "spread_pct": 8.0, "wander_pct": 0.5, "amplitude_deg": 0.05}]
+        motors = [
+            {
+                "count": 4,
+                "axis": "yaw",
+                "frequency_hz": turn_hz,
+                "spread_pct": 8.0,
+                "wander_pct": 0.5,
+                "amplitude_deg": 0.05,
+            }
+        ]
         out.append((f"vibration motors {i}", recipe("360p60", 700 + i, readout, motors=motors, **base)))
-        tone = [{"axis": "pitch", "frequency_hz": turn_hz, "amplitude_deg": 0.08, "wander_pct": 4.0, "wander_time_s": 3.0}]
+        tone = [
+            {"axis": "pitch", "frequency_hz": turn_hz, "amplitude_deg": 0.08, "wander_pct": 4.0, "wander_time_s": 3.0}
+        ]
         out.append((f"vibration throttle {i}", recipe("360p60", 710 + i, readout, tone=tone, **base)))
         shaft = [{"axis": "yaw", "frequency_hz": turn_hz * order, "amplitude_deg": 0.05 / order} for order in (1, 2)]
         out.append((f"vibration shaft {i}", recipe("360p60", 720 + i, readout, tone=shaft, **base)))
@@ -129,7 +161,9 @@ def cases() -> list[tuple[str, dict]]:
             camera={"hfov_deg": float(rng.uniform(45, 110)), "frame_rate": 30},
             flight={"duration_s": round(took + 0.8, 2), "tilt_deg": float(rng.uniform(5, 35)), "height_m": 8.0})))
     half = [{"axis": "heading", "rate_deg_per_s": 35.0, "start_s": 0.4, "stop_s": 6.0, "ramp_s": 0.3}]
-    out.append(("refuse half a turn", recipe("360p60", 820, 10.0, pan=half, flight={"duration_s": 6.5, "tilt_deg": 15.0})))
+    out.append(
+        ("refuse half a turn", recipe("360p60", 820, 10.0, pan=half, flight={"duration_s": 6.5, "tilt_deg": 15.0}))
+    )
     return out
 
 
@@ -171,16 +205,27 @@ def summary(table: pd.DataFrame) -> str:
     groups = [("swing clip of 4 s, " + m, f"swing {m}") for m in ("720p60", "1080p30")]
     groups += [("flicker clip of 2.5 s, " + m, f"flicker {m}") for m in ("720p60", "1080p30")]
     groups += [("swing clip of 0.06 bits per pixel, " + m, f"thin swing {m}") for m in ("720p60", "1080p30")]
-    groups += [("vibration: four motors of unlike speed", "vibration motors"), ("vibration: changing throttle", "vibration throttle"),
-               ("vibration: two harmonics of one steady shaft", "vibration shaft"), ("field of view, full turn", "turn")]
+    groups += [
+        ("vibration: four motors of unlike speed", "vibration motors"),
+        ("vibration: changing throttle", "vibration throttle"),
+        ("vibration: two harmonics of one steady shaft", "vibration shaft"),
+        ("field of view, full turn", "turn"),
+    ]
     for label, start in groups:
         rows = table[table.case.str.startswith(start)]
         good = rows[rows.told.notna()]
         error, wide = 100 * (good.told / good.true - 1).abs(), 100 * good.ci95 / good.true
         inside = int(((good.told - good.true).abs() <= good.ci95).sum())
-        figures = f"{error.max():.2f} % | {error.median():.2f} % | {wide.max():.2f} % | {inside} of {len(good)}" if len(good) else " | | | "
+        figures = (
+            f"{error.max():.2f} % | {error.median():.2f} % | {wide.max():.2f} % | {inside} of {len(good)}"
+            if len(good)
+            else " | | | "
+        )
         lines.append(f"| {label} | {len(rows)} | {len(rows) - len(good)} | {figures} |")
-    for label, start in (("global shutter by swing, ms", "swing global"), ("global shutter by flicker, ms", "flicker global")):
+    for label, start in (
+        ("global shutter by swing, ms", "swing global"),
+        ("global shutter by flicker, ms", "flicker global"),
+    ):
         rows = table[table.case.str.startswith(start)]
         for _, row in rows.iterrows():
             lines.append(f"| {label} | 1 | {int(np.isnan(row.told))} | {abs(row.told):.3f} | | {row.ci95:.3f} | "
@@ -200,15 +245,20 @@ def main() -> None:
     with tempfile.TemporaryDirectory() as folder, ProcessPoolExecutor(args.jobs) as pool:
         for row in pool.map(run_case, [(name, made, folder) for name, made in chosen]):
             rows.append(row)
-            print(f"{row['case']}: {row['true']:.4g} -> {row['told']:.5g} +- {row['ci95']:.2g} {row['why']}", flush=True)
+            print(
+                f"{row['case']}: {row['true']:.4g} -> {row['told']:.5g} +- {row['ci95']:.2g} {row['why']}", flush=True
+            )
     table = pd.DataFrame(rows)
     text = summary(table)
     print(text)
     if not args.only:
         table.round(5).to_csv(HERE / "readout.csv", index=False)
         (HERE / "readout.md").write_text(
-            "# Readout and field-of-view campaign, latest result\n\nMade by `python -m tests.bench.readout`: rendered clips, H.264, "
-            "0.1 to 0.3 bits per pixel.\n\n" + text + "\n", encoding="utf-8")
+            "# Readout and field-of-view campaign, latest result\n\n"
+            "Made by `python -m tests.bench.readout`: rendered clips, H.264, "
+            "0.1 to 0.3 bits per pixel.\n\n" + text + "\n",
+            encoding="utf-8",
+        )
 
 
 if __name__ == "__main__":
