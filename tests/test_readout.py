@@ -25,6 +25,7 @@ from framegrade.readout.field_of_view import FieldOfView, measure_turn
 from framegrade.readout.flicker import measure_flicker, row_brightness
 from framegrade.readout.swing import measure_swing
 from framegrade.readout.vibration import Line, measure_vibration, spectral_lines, weigh_readouts
+from framegrade.simulate import flight_from_dict, render
 from tests import media
 from tests import signals as made
 
@@ -152,12 +153,16 @@ def test_something_big_that_moves_of_its_own_does_not_pass_for_a_readout():
         measure_swing(moved)
 
 
-def test_gaps_and_uneven_times_do_no_harm():
+def test_gaps_and_mismatched_bands_do_no_harm():
     motion = swing_bands(0.024, duration_s=4.0)
     motion.known[10:14] = False
-    motion.known[60, :20] = False
     motion.motion_px[10:14] = 1e3
-    assert measure_swing(motion).readout_s == pytest.approx(0.024, rel=0.02)
+    motion.known[60, :20] = False
+    motion.motion_px[80, 25] += 7.0
+    motion.motion_px[30:33, 3, 1] -= 5.0
+    found = measure_swing(motion)
+    assert found.readout_s == pytest.approx(0.024, rel=0.01)
+    assert found.ci_s < 0.02 * 0.024
 
 
 # ------------------------------------------------------------------------------------------------------------ flicker
@@ -320,6 +325,14 @@ def test_vibration_in_step_over_the_height_is_a_global_shutter():
     assert measure_vibration(lines, 1 / RATE).global_shutter
 
 
+def test_slow_shaking_that_hardly_leans_over_the_height_is_refused():
+    """5 to 9 Hz are a tenth of a cycle a frame height: the least fault of the cycles is a large one of the readout."""
+    lines = spectral_lines(rotor_signals((5.2, 0.8, 0.1), (7.1, 0.8, 1.0), (9.0, 0.8, 2.0)), 1 / 3)
+    assert len(lines) >= 3
+    with pytest.raises(CannotTell):
+        measure_vibration(lines, 1 / RATE)
+
+
 def test_no_vibration_is_refused():
     with pytest.raises(CannotTell, match="hardly any vibration"):
         measure_vibration(spectral_lines(rotor_signals((137.3, 0.0, 0.0)), 1 / 3), 1 / RATE)
@@ -446,6 +459,35 @@ def test_the_command_writes_and_updates_a_camera_file(lamp_clip, tmp_path, capsy
     assert camera.modes[1].readout_s == pytest.approx(0.014, rel=0.01)
     assert (camera.modes[1].hfov_deg, camera.modes[1].exposure_s) == (70.0, 0.001)
     assert camera.modes[1].readout_ci_ms > 0
+
+
+def test_a_rendered_swing_from_file_to_camera_file(tmp_path, capsys):
+    """The simulator's rolling shutter, which shares no code with the estimator."""
+    recipe = {
+        "seed": 5, "camera": {"width_px": 480, "height_px": 270, "frame_rate": 30, "readout_ms": 24.0, "hfov_deg": 75.0},
+        "flight": {"duration_s": 3.0, "tilt_deg": 20.0}, "encode": {"codec": "h264", "bits_per_pixel": 0.5},
+        "scene": {"kind": "backdrop", "distance_m": 12.0, "pattern": "paving"},
+        "sway": [{"axis": "yaw", "frequency_hz": 1.9, "amplitude_deg": 4.0, "phase_deg": 20.0},
+                 {"axis": "pitch", "frequency_hz": 1.3, "amplitude_deg": 0.6, "phase_deg": 70.0}],
+    }
+    clip, out = tmp_path / "swing.mp4", tmp_path / "camera.toml"
+    render(flight_from_dict(recipe), clip)
+    assert cli.main(["readout", str(clip), "-o", str(out)]) == 0
+    (mode,) = load_camera(out).modes
+    assert mode.readout_s == pytest.approx(0.024, rel=0.02)
+    assert abs(mode.readout_s - 0.024) <= mode.readout_ci_ms / 1e3
+    assert "(swing: " in capsys.readouterr().out
+
+
+def test_a_turn_from_file_to_camera_file(panorama, tmp_path, capsys):
+    frames = [luma for _, luma in turn_frames(panorama, 80.0, 366)]
+    clip = media.write_clip(tmp_path / "turn.mp4", frames, rate=30, options={"crf": "20"})
+    out = tmp_path / "camera.toml"
+    save_camera(Camera("nose", (CameraMode(PAN_WIDTH, PAN_HEIGHT, 30.0, readout_s=0.02, hfov_deg=95.0),)), out)
+    assert cli.main(["readout", "--pan-turn", str(clip), "-o", str(out)]) == 0
+    (mode,) = load_camera(out).modes
+    assert mode.hfov_deg == pytest.approx(80.0, rel=0.02) and mode.readout_s == 0.02
+    assert "differs from the camera file's field of view of 95 degrees" in capsys.readouterr().out
 
 
 def test_a_new_file_and_its_name(lamp_clip, tmp_path, capsys):
